@@ -1,0 +1,8 @@
+//! asterskein: gives every detection of a crowded, moving star field to the right star, and
+//! says how sure it is of each link.
+
+#![deny(clippy::print_stdout, clippy::print_stderr)]
+#![warn(missing_debug_implementations)]
+
+pub mod maths;
+pub mod model;

@@ -1,0 +1,10 @@
+//! Every type that crosses a stage or reaches a file. No algorithm, no input or output.
+
+pub mod campaign;
+pub mod detection;
+pub mod flag;
+pub mod motion;
+pub mod note;
+pub mod region;
+pub mod result;
+pub mod time;
