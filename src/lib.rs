@@ -4,5 +4,6 @@
 #![deny(clippy::print_stdout, clippy::print_stderr)]
 #![warn(missing_debug_implementations)]
 
+pub mod engine;
 pub mod maths;
 pub mod model;

@@ -7,4 +7,5 @@ pub mod motion;
 pub mod note;
 pub mod region;
 pub mod result;
+pub mod ruling;
 pub mod time;
