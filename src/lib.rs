@@ -7,3 +7,4 @@
 pub mod engine;
 pub mod maths;
 pub mod model;
+pub mod near;

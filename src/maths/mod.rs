@@ -1,6 +1,7 @@
 //! Constants with their source, small covariance matrices and a total order of floats.
 //! Knows nothing of stars, files or linking.
 
+pub mod assign;
 pub mod cov2;
 pub mod lnprob;
 pub mod order;
