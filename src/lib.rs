@@ -5,6 +5,7 @@
 #![warn(missing_debug_implementations)]
 
 pub mod engine;
+pub mod io;
 pub mod maths;
 pub mod model;
 pub mod near;

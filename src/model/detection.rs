@@ -66,6 +66,15 @@ impl Ids {
             Self::Text(t) => t[row].clone(),
         }
     }
+    /// Appends the identifier of a row.
+    pub fn push(&self, row: usize, out: &mut String) {
+        use std::fmt::Write;
+        match self {
+            // Writing to a text cannot fail.
+            Self::Numbers(n) => drop(write!(out, "{}", n[row])),
+            Self::Text(t) => out.push_str(&t[row]),
+        }
+    }
     #[must_use]
     pub fn len(&self) -> usize {
         match self {

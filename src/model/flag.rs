@@ -41,6 +41,17 @@ impl Flags {
     pub fn set(&mut self, other: Self) {
         self.0 |= other.0;
     }
+    /// The flags of a cell; words that are not in the table are passed over.
+    #[must_use]
+    pub fn from_words(cell: &str) -> Self {
+        let mut flags = Self::default();
+        for word in cell.split(';') {
+            if let Some((flag, ..)) = TABLE.iter().find(|(_, w, _)| *w == word) {
+                flags.set(*flag);
+            }
+        }
+        flags
+    }
     /// Words joined by `;`, in table order.
     #[must_use]
     pub fn words(self) -> String {
