@@ -136,7 +136,7 @@ impl Tree {
     /// sorted by the two rows. Both trees may hold the same points.
     #[must_use]
     pub fn pairs_within(&self, other: &Self, radius_mas: f64) -> Vec<Pair> {
-        if self.is_empty() || other.is_empty() || !(radius_mas >= 0.0) {
+        if self.is_empty() || other.is_empty() || radius_mas.is_nan() || radius_mas < 0.0 {
             return Vec::new();
         }
         if std::ptr::eq(self, other) {

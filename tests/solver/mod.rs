@@ -1,0 +1,5 @@
+//! Assignment, neighbours, links and the exact choice, each against a slower way to the same
+//! answer.
+
+mod assignment;
+mod neighbours;
