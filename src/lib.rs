@@ -8,4 +8,5 @@ pub mod engine;
 pub mod io;
 pub mod maths;
 pub mod model;
+pub mod motion;
 pub mod near;
