@@ -1,6 +1,7 @@
 //! Every type that crosses a stage or reaches a file. No algorithm, no input or output.
 
 pub mod campaign;
+pub mod change;
 pub mod detection;
 pub mod flag;
 pub mod motion;

@@ -186,7 +186,7 @@ pub struct Rival {
     pub rank: usize,
     /// ln odds against the best explanation (negative: less likely).
     pub ln_odds: f64,
-    /// What changes, in words.
+    /// What changes, in words: clauses of [`super::change::Change`] joined by `; `.
     pub change: String,
 }
 
