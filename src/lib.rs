@@ -6,6 +6,7 @@
 
 pub mod engine;
 pub mod io;
+pub mod link;
 pub mod maths;
 pub mod model;
 pub mod motion;

@@ -2,4 +2,5 @@
 //! answer.
 
 mod assignment;
+mod links;
 mod neighbours;
