@@ -1,2 +1,3 @@
 //! All integration tests, one binary.
+mod motion;
 mod solver;

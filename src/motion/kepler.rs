@@ -116,6 +116,37 @@ pub fn propagate_with_stm(gm: f64, r0: [f64; 3], v0: [f64; 3], dt: f64) -> Trans
     }
 }
 
+/// Time from a state to the nearest pericentre passage (negative: it lies in the past), for any
+/// conic. A circular orbit counts as being at pericentre.
+#[must_use]
+pub fn time_to_pericentre(gm: f64, r0: [f64; 3], v0: [f64; 3]) -> f64 {
+    let c = Conic::new(gm, r0, v0);
+    // r.v vanishes there: eta G_0 + zeta G_1 = 0.
+    let w = c.beta * (c.eta / c.zeta) * (c.eta / c.zeta);
+    let s = if c.zeta > 0.0 && w.abs() < 1e-3 {
+        -(c.eta / c.zeta) * (1.0 - w * (1.0 / 3.0 - w * (1.0 / 5.0 - w * (1.0 / 7.0 - w / 9.0))))
+    } else if c.beta > 0.0 {
+        -(c.eta * c.root_beta).atan2(c.zeta) / c.root_beta
+    } else {
+        -(c.eta * c.root_beta / c.zeta).atanh() / c.root_beta
+    };
+    let g = c.g_at(s);
+    c.r0 * s + c.eta * g.g2 + c.zeta * g.g3
+}
+
+/// Eccentric anomaly \[rad\] of an ellipse, `0 <= e < 1`: solves E - e sin E = M for any M.
+#[must_use]
+pub fn eccentric_anomaly(e: f64, mean_anomaly: f64) -> f64 {
+    let root = Conic::at_pericentre(e, 1.0).solve(mean_anomaly);
+    root.g.s + root.revolutions * std::f64::consts::TAU
+}
+
+/// Hyperbolic anomaly, `e > 1`: solves e sinh H - H = M.
+#[must_use]
+pub fn hyperbolic_anomaly(e: f64, mean_anomaly: f64) -> f64 {
+    Conic::at_pericentre(e, -1.0).solve(mean_anomaly).g.s
+}
+
 /// Scalars of the start state that fix the orbit's shape and phase.
 struct Conic {
     gm: f64,
@@ -172,6 +203,19 @@ impl Conic {
             beta,
             zeta: gm - beta * r0,
             root_beta: beta.abs().sqrt(),
+        }
+    }
+
+    /// At pericentre, with unit gm and unit semi-major axis (`beta` = 1 or -1): s is the
+    /// eccentric or hyperbolic anomaly there.
+    fn at_pericentre(e: f64, beta: f64) -> Self {
+        Self {
+            gm: 1.0,
+            r0: beta * (1.0 - e),
+            eta: 0.0,
+            beta,
+            zeta: e,
+            root_beta: 1.0,
         }
     }
 

@@ -1,5 +1,8 @@
 //! How stars move: propagation about a mass, fits, orbit elements.
 //!
-//! All orbits are relative to the mass: x east, y north, z away from the observer.
+//! Orbits are relative to the mass: x east, y north, z away from the observer; mas, years.
 
+pub mod elements;
 pub mod kepler;
+pub mod linear;
+pub mod orbit_columns;

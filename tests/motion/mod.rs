@@ -1,0 +1,5 @@
+//! Propagation, fits and elements against published values, high-precision cases and properties.
+
+mod elements;
+mod propagation;
+mod reference;
