@@ -5,6 +5,7 @@
 #![warn(missing_debug_implementations)]
 
 pub mod engine;
+pub mod frame;
 pub mod io;
 pub mod link;
 pub mod maths;

@@ -126,18 +126,19 @@ fn fault(line: usize, column: Option<&str>, found: &str, expected: &str) -> Ecsv
 }
 
 /// What the YAML header says.
-struct Head {
-    delimiter: u8,
-    columns: Vec<ColumnHead>,
+pub(super) struct Head {
+    pub delimiter: u8,
+    pub columns: Vec<ColumnHead>,
     name: String,
     description: String,
-    n_lines: usize,
-    n_bytes: usize,
+    /// Lines and bytes of the header, without the line of names.
+    pub n_lines: usize,
+    pub n_bytes: usize,
 }
 
-struct ColumnHead {
-    name: String,
-    unit: String,
+pub(super) struct ColumnHead {
+    pub name: String,
+    pub unit: String,
     description: String,
     ucd: Option<String>,
     kind: Kind,
@@ -152,7 +153,7 @@ enum Kind {
 }
 
 impl Head {
-    fn read(bytes: &[u8]) -> Result<Self, EcsvError> {
+    pub(super) fn read(bytes: &[u8]) -> Result<Self, EcsvError> {
         let (yaml, n_lines, n_bytes) = comment_block(bytes)?;
         let bad = |found: &str, expected: &str| fault(1, None, found, expected);
         let documents = YamlLoader::load_from_str(&yaml)

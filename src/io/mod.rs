@@ -1,10 +1,25 @@
-//! Text and tables to model and back; errors with file, line, column and value.
+//! Files to model and back. Every fault names file, line, column, what was found and what was
+//! expected; readers collect faults rather than stop at the first.
 
+pub mod campaign;
+pub mod dates;
 pub mod ecsv_read;
 pub mod ecsv_write;
+pub mod fault;
+pub mod files;
+pub mod lists;
 pub mod number_text;
 pub mod result_tables;
 pub mod run_dir;
 pub mod run_info;
 pub mod table;
 pub mod unit_text;
+
+mod columns;
+mod delimited;
+mod ecsv_list;
+mod instrument;
+mod kind;
+mod raw_list;
+mod toml_table;
+mod units;

@@ -5,4 +5,5 @@ pub mod assign;
 pub mod cov2;
 pub mod lnprob;
 pub mod order;
+pub mod sky;
 pub mod units;

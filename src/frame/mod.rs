@@ -1,0 +1,4 @@
+//! Instrument coordinates to the common frame.
+
+pub mod footprint;
+pub mod known;

@@ -1,0 +1,14 @@
+//! Reading campaigns and lists: what is accepted, and what every fault says.
+
+mod accepted;
+mod bad_input;
+mod injected;
+
+use std::path::{Path, PathBuf};
+
+/// A folder of `fixtures/`.
+fn fixture(name: &str) -> PathBuf {
+    Path::new(env!("CARGO_MANIFEST_DIR"))
+        .join("fixtures")
+        .join(name)
+}
