@@ -59,7 +59,7 @@ pub fn propagate(gm: f64, r0: [f64; 3], v0: [f64; 3], dt: f64) -> ([f64; 3], [f6
 }
 
 /// State after `dt` and the derivatives of (x, y) by the start state and by `gm`: all that a fit
-/// to positions needs, at about a third of the cost of the full matrix.
+/// to positions needs.
 #[must_use]
 pub fn propagate_sky(gm: f64, r0: [f64; 3], v0: [f64; 3], dt: f64) -> SkyPartials {
     let conic = Conic::new(gm, r0, v0);

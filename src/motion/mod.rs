@@ -6,3 +6,6 @@ pub mod elements;
 pub mod kepler;
 pub mod linear;
 pub mod orbit_columns;
+pub mod orbit_fit;
+pub mod start;
+pub mod three_points;

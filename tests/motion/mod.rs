@@ -3,3 +3,4 @@
 mod elements;
 mod propagation;
 mod reference;
+mod starts;
