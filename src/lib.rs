@@ -12,3 +12,4 @@ pub mod maths;
 pub mod model;
 pub mod motion;
 pub mod near;
+pub mod resolve;

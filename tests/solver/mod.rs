@@ -4,3 +4,4 @@
 mod assignment;
 mod links;
 mod neighbours;
+mod tangles;
