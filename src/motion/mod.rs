@@ -8,4 +8,5 @@ pub mod linear;
 pub mod orbit_columns;
 pub mod orbit_fit;
 pub mod start;
+pub mod terms;
 pub mod three_points;

@@ -20,6 +20,7 @@ use nalgebra::{SMatrix, SVector};
 
 use super::kepler;
 use super::linear::Point;
+use super::terms::Terms;
 
 /// State (x, y, z, vx, vy, vz) relative to the mass; mas and mas/yr.
 pub type State = SVector<f64, 6>;
@@ -127,6 +128,8 @@ pub struct OrbitProblem<'a> {
     pub observed: Observations<'a>,
     pub prior: OrbitPrior,
     pub errors: ErrorLaw,
+    /// Optional terms; off by default.
+    pub terms: Terms,
 }
 
 /// Steps allowed for one start.
@@ -217,8 +220,14 @@ impl OrbitProblem<'_> {
         let mut curvature = SMatrix::<f64, 6, 6>::zeros();
         let mut slope = State::zeros();
         let mut objective = 0.0;
+        let is_plain = self.terms.are_off();
         for p in self.observed.points {
-            let at = kepler::propagate_sky(self.gm_mas3_yr2, r, v, p.t_yr - self.t_ref_yr);
+            let dt = p.t_yr - self.t_ref_yr;
+            let at = if is_plain {
+                kepler::propagate_sky(self.gm_mas3_yr2, r, v, dt)
+            } else {
+                self.terms.seen(self.gm_mas3_yr2, r, v, dt)
+            };
             let (dx, dy) = (at.r[0] - p.x_mas, at.r[1] - p.y_mas);
             let w = p.cov_mas2.inverse();
             let (wx, wy) = (w.xx * dx + w.xy * dy, w.xy * dx + w.yy * dy);
@@ -239,7 +248,7 @@ impl OrbitProblem<'_> {
         for o in self.observed.velocities {
             let at = kepler::propagate_with_stm(self.gm_mas3_yr2, r, v, o.t_yr - self.t_ref_yr);
             let weight = 1.0 / (o.err_mas_yr * o.err_mas_yr);
-            let d = at.v[2] - o.vz_mas_yr;
+            let d = self.speed_at(&r, &v, o.t_yr) - o.vz_mas_yr;
             objective += weight * d * d;
             let row = &at.d_state[5];
             for i in 0..6 {
@@ -317,16 +326,30 @@ impl OrbitProblem<'_> {
         fit.ln_evidence.is_finite().then_some(fit)
     }
 
+    /// Line-of-sight speed that a spectrum taken at a time would show.
+    fn speed_at(&self, r: &[f64; 3], v: &[f64; 3], t_yr: f64) -> f64 {
+        let dt = t_yr - self.t_ref_yr;
+        let at = self.terms.emission_dt(self.gm_mas3_yr2, *r, *v, dt);
+        let (p, u) = self.terms.propagate(self.gm_mas3_yr2, *r, *v, at);
+        u[2] + self.terms.velocity_shift(self.gm_mas3_yr2, p, u)
+    }
+
     fn plain_chi2(&self, state: &State) -> f64 {
         let (r, v) = split(state);
         let points = self.observed.points.iter().map(|p| {
-            let (at, _) = kepler::propagate(self.gm_mas3_yr2, r, v, p.t_yr - self.t_ref_yr);
+            let dt = p.t_yr - self.t_ref_yr;
+            let at = if self.terms.are_off() {
+                kepler::propagate(self.gm_mas3_yr2, r, v, dt).0
+            } else {
+                self.terms.seen(self.gm_mas3_yr2, r, v, dt).r
+            };
             p.cov_mas2.chi2(p.x_mas - at[0], p.y_mas - at[1])
         });
-        let speeds = self.observed.velocities.iter().map(|o| {
-            let (_, at) = kepler::propagate(self.gm_mas3_yr2, r, v, o.t_yr - self.t_ref_yr);
-            ((at[2] - o.vz_mas_yr) / o.err_mas_yr).powi(2)
-        });
+        let speeds = self
+            .observed
+            .velocities
+            .iter()
+            .map(|o| ((self.speed_at(&r, &v, o.t_yr) - o.vz_mas_yr) / o.err_mas_yr).powi(2));
         points.sum::<f64>() + speeds.sum::<f64>()
     }
 }

@@ -4,3 +4,4 @@ mod elements;
 mod propagation;
 mod reference;
 mod starts;
+mod terms;

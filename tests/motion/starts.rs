@@ -7,6 +7,7 @@ use asterskein::motion::orbit_fit::{
     ErrorLaw, FitEnd, Observations, OrbitPrior, OrbitProblem, RadialVelocity, State, split,
 };
 use asterskein::motion::start::{self, Arc};
+use asterskein::motion::terms::Terms;
 use asterskein::motion::three_points::{SkyPoint, orbits_through};
 use rand::{RngExt, SeedableRng};
 use rand_chacha::ChaCha8Rng;
@@ -115,6 +116,7 @@ fn problem<'a>(points: &'a [Point], velocities: &'a [RadialVelocity]) -> OrbitPr
             v_sigma_mas_yr: [60.0; 3],
         },
         errors: ErrorLaw::Gaussian,
+        terms: Terms::default(),
     }
 }
 
