@@ -12,4 +12,5 @@ pub mod maths;
 pub mod model;
 pub mod motion;
 pub mod near;
+pub mod output;
 pub mod resolve;

@@ -1,4 +1,5 @@
 //! All integration tests, one binary.
 mod motion;
 mod reading;
+mod report;
 mod solver;

@@ -1,0 +1,3 @@
+//! What is derived from a result: pictures for people, tables for fitters, names that last.
+
+pub mod report;
