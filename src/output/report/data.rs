@@ -470,10 +470,10 @@ fn tracks<'a>(
         c.cov.push(cov.map(|v| round_significant(v, 6)));
         c.mag.push(t.mag.map(|v| round(v, 4)));
         c.mag_scatter.push(t.mag_scatter.map(|v| round(v, 4)));
-        c.chi2.push(round(t.chi2, 3));
+        c.chi2.push(round(t.chi2, 5));
         c.dof.push(t.dof);
         c.ln_evidence.push(round(t.ln_evidence, 3));
-        c.probability.push(round(t.probability, 5));
+        c.probability.push(round(t.probability, 7));
         let tangle = t.tangle.and_then(|g| page_tangle.get(&g));
         c.tangle.push(tangle.map_or(-1, |&g| g as i64));
         c.flags.push(t.flags.0);

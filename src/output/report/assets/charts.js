@@ -34,7 +34,7 @@ function extent(values, pad = 0.06, least = 0) {
 function frame(options) {
   const { title, xLabel, yLabel, flipX, flipY, width = 460, height = 230 } = options;
   let [x, y] = [options.x.slice(), options.y.slice()];
-  const box = { left: 58, right: width - 10, top: title ? 26 : 10, bottom: height - 36 };
+  const box = { left: 58, right: width - 18, top: title ? 26 : 10, bottom: height - 36 };
   if (options.equal) [x, y] = equalScale(x, y, box);
   const px = (v) => {
     const share = (v - x[0]) / (x[1] - x[0]);
@@ -47,7 +47,7 @@ function frame(options) {
   const id = "clip" + frame.count++;
   const area = svg("g", { "clip-path": `url(#${id})` });
   const xTicks = niceTicks(x[0], x[1], Math.max(2, (box.right - box.left) / 80));
-  const yTicks = niceTicks(y[0], y[1], Math.max(2, (box.bottom - box.top) / 40));
+  const yTicks = niceTicks(y[0], y[1], Math.max(2, (box.bottom - box.top) / 28));
   const root = svg("svg", {
     class: "chart", viewBox: `0 0 ${width} ${height}`, role: "img",
     "aria-label": options.describe || title || "",

@@ -3,7 +3,7 @@
 function epochsPage(run, main) {
   const rows = run.epochs.map((epoch, e) => ({ ...epoch, e }));
   const cell = (key, decimals) => ({ value: (r) => r[key], cell: (r) => fixed(r[key], decimals) });
-  main.append(h("h1", {}, "Epochs"), leftOut(run),
+  put(main, h("h1", {}, "Epochs"), leftOut(run),
     sortedTable({
       label: "Epochs",
       rows,
@@ -38,7 +38,7 @@ function epochSeries(run, title, yLabel, value, limits) {
   if (!points.length) return null;
   const f = frame({
     title, xLabel: "time (yr)", yLabel, x: extent(points.map((p) => p[0]), 0.04, 0.5),
-    y: limits || extent(points.map((p) => p[1]), 0.1, 1e-6), height: 190,
+    y: limits || extent(points.map((p) => p[1]), 0.1, 0.1 * Math.abs(points[0][1]) + 1e-3), height: 190,
   });
   for (const [t, v, e] of points) {
     const g = mark("sure", f.px(t), f.py(v));
@@ -54,7 +54,7 @@ function epochPage(run, main, e) {
   for (let d = run.epochStart[e]; d < run.epochStart[e + 1]; d++) for (const m of run.holders(d)) members.push({ d, m, alone: run.nHolders(d) === 1 });
   const order = run.byTime.indexOf(e);
   const step = (i, text) => run.byTime[i] !== undefined && h("a", { href: routeOf("epoch", run.byTime[i]) }, text);
-  main.append(
+  put(main, 
     h("div", { class: "titleline" }, h("h1", {}, epoch.name), h("span", {}, flagChips(run, epoch.flags)),
       h("span", { class: "steps" }, step(order - 1, "‹ earlier"), step(order + 1, "later ›"))),
     epoch.failed ? h("div", { class: "notice" }, h("p", {}, "This list was not placed in the common frame: ", epoch.failed)) : null,
@@ -72,7 +72,7 @@ function epochPage(run, main, e) {
       ])),
       h("section", {}, h("h2", {}, "Transformation"), transformTable(epoch))));
   if (!members.length) return;
-  main.append(h("h2", {}, "Residuals"), h("div", { class: "charts" },
+  put(main, h("h2", {}, "Residuals"), h("div", { class: "charts" },
     residualMap(run, epoch, members), residualHistogram(run, members, 0), residualHistogram(run, members, 1),
     zeroPointChart(run, members)));
 }

@@ -3,7 +3,7 @@
 function countsPage(run, main) {
   const c = run.header.counts;
   const probabilities = run.T.probability;
-  main.append(h("h1", {}, "Counts and flags"), leftOut(run),
+  put(main, h("h1", {}, "Counts and flags"), leftOut(run),
     h("div", { class: "cards" },
       h("section", {}, h("h2", {}, "Run"), facts([
         ["Lists", whole(c.epochs)], ["Detections", whole(c.detections)], ["Tracks", whole(c.tracks)],
@@ -36,7 +36,7 @@ function countsPage(run, main) {
       histogram({ title: "Tracks by number of detections", xLabel: "detections", yLabel: "tracks", bins: binned(run.T.n_members), height: 210 }),
       histogram({ title: "Probability of being one real star", xLabel: "probability", yLabel: "tracks", bins: binned(probabilities), height: 210 })));
   if (run.header.notes.length) {
-    main.append(h("h2", {}, "Notes"), sortedTable({
+    put(main, h("h2", {}, "Notes"), sortedTable({
       label: "Notes",
       rows: run.header.notes,
       columns: ["What", "Where", "Finding"].map((label, k) => ({ label, text: true, value: (n) => n[k] })),
@@ -51,7 +51,7 @@ function valuesOf(table, name) {
 
 function auditPage(run, main) {
   const verdicts = run.extra("verdicts");
-  main.append(h("h1", {}, "Audit"),
+  put(main, h("h1", {}, "Audit"),
     h("p", { class: "lead" }, "Claimed objects, and what the lists say for and against each being a star of its own. A verdict is a weighing of evidence, not a proof."),
     plainTable(verdicts, verdicts.rows, {
       claim: (name) => h("a", { href: routeOf("claim", name) }, name),
@@ -68,13 +68,13 @@ function claimPage(run, main, name) {
   const verdicts = run.extra("verdicts");
   const row = verdicts.rows[valuesOf(verdicts, "claim").indexOf(name)];
   const evidence = run.extra("evidence");
-  main.append(h("h1", {}, name), facts(verdicts.columns.map((column, k) => [
+  put(main, h("h1", {}, name), facts(verdicts.columns.map((column, k) => [
     column.replaceAll("_", " "), column === "best_rival" ? rivalNames(run, row[k]) : row[k],
   ])));
   if (!evidence) return;
   const own = evidence.columns.indexOf("claim");
   const rows = evidence.rows.filter((r) => r[own] === name);
-  main.append(h("h2", {}, "Epoch by epoch"), evidenceChart(evidence, rows), plainTable(evidence, rows));
+  put(main, h("h2", {}, "Epoch by epoch"), evidenceChart(evidence, rows), plainTable(evidence, rows));
 }
 
 // Every numeric column of evidence in nats becomes a set of steps over the epochs.
@@ -99,11 +99,11 @@ function evidenceChart(table, rows) {
 }
 
 function recoveryPage(run, main) {
-  main.append(h("h1", {}, "Recovery"),
+  put(main, h("h1", {}, "Recovery"),
     h("p", { class: "lead" }, "What became of made-up stars that were put into the real lists."));
   for (const [name, title] of [["completeness", "Completeness"], ["injected", "Made-up stars one by one"]]) {
     const table = run.extra(name);
-    if (table) main.append(h("h2", {}, title), name === "completeness" ? completenessCharts(table) : null, plainTable(table));
+    if (table) put(main, h("h2", {}, title), name === "completeness" ? completenessCharts(table) : null, plainTable(table));
   }
 }
 

@@ -126,7 +126,7 @@ function fieldPage(run, main, open) {
       return svg("line", { x1: x, x2: x, y1: 1, y2: 9 });
     }));
   main.classList.add("wide");
-  main.append(
+  put(main, 
     leftOut(run),
     h("div", { class: "stage" }, map.root, side),
     h("div", { class: "time" },

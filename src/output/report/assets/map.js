@@ -18,6 +18,8 @@ function makeMap(run, hooks) {
   let size = { w: 0, h: 0, dpr: 1 };
   let waiting = false;
   let fitted = false;
+  const still = document.createElement("canvas");
+  let stillKey = "";
 
   const mags = T.mag.filter((m) => m !== null).slice().sort((a, b) => a - b);
   const [bright, faint] = [mags[Math.floor(mags.length * 0.02)] ?? 0, mags[Math.floor(mags.length * 0.98)] ?? 1];
@@ -94,14 +96,13 @@ function makeMap(run, hooks) {
     if (!colours.paper) readColours();
     locate();
     const g = canvas.getContext("2d");
-    g.setTransform(size.dpr, 0, 0, size.dpr, 0, 0);
-    g.fillStyle = colours.paper;
-    g.fillRect(0, 0, size.w, size.h);
     const epoch = run.nearestEpoch(view.t);
-    drawOutline(g, epoch);
-    if (layers.all) drawEveryDetection(g);
+    drawStill();
+    g.setTransform(1, 0, 0, 1, 0, 0);
+    g.drawImage(still, 0, 0);
+    g.setTransform(size.dpr, 0, 0, size.dpr, 0, 0);
     if (layers.groups) drawGroups(g);
-    if (layers.paths) drawPaths(g);
+    drawOutline(g, epoch);
     drawCentre(g);
     drawStars(g);
     if (layers.detections) drawDetections(g, epoch);
@@ -109,6 +110,23 @@ function makeMap(run, hooks) {
     if (layers.names) drawNames(g);
     drawScale(g);
     hooks.drawn(view, epoch);
+  }
+
+  // What does not change with time is kept until the view changes.
+  function drawStill() {
+    const key = JSON.stringify([view.cx, view.cy, view.scale, size, layers.all, layers.paths, layers.calm, colours.paper]);
+    if (key === stillKey) return;
+    stillKey = key;
+    if (still.width !== canvas.width || still.height !== canvas.height) {
+      still.width = canvas.width;
+      still.height = canvas.height;
+    }
+    const g = still.getContext("2d");
+    g.setTransform(size.dpr, 0, 0, size.dpr, 0, 0);
+    g.fillStyle = colours.paper;
+    g.fillRect(0, 0, size.w, size.h);
+    if (layers.all) drawEveryDetection(g);
+    if (layers.paths) drawPaths(g);
   }
 
   function drawOutline(g, epoch) {
@@ -129,7 +147,7 @@ function makeMap(run, hooks) {
 
   // Hundreds of thousands of points: pixels are set directly.
   function drawEveryDetection(g) {
-    const [w, hgt] = [canvas.width, canvas.height];
+    const [w, hgt] = [still.width, still.height];
     const image = g.getImageData(0, 0, w, hgt);
     const pixels = new Uint32Array(image.data.buffer);
     const probe = document.createElement("canvas").getContext("2d");
@@ -153,23 +171,16 @@ function makeMap(run, hooks) {
   }
 
   function drawGroups(g) {
-    g.lineJoin = "round";
-    g.lineCap = "round";
-    g.globalAlpha = 0.22;
-    g.strokeStyle = colours.doubt;
+    g.globalAlpha = 0.2;
     g.fillStyle = colours.doubt;
-    g.lineWidth = 20;
     for (const tangle of run.header.tangles) {
       // The outline of a very large group would only hide the field.
       if (tangle.tracks.length > 40 || tangle.tracks.length < 2) continue;
       const points = tangle.tracks.filter(alive).map((k) => [px(now.x[k]), py(now.y[k])]);
       if (!points.some(([x, y]) => visible(x, y, 30))) continue;
-      const ring = hull(points);
       g.beginPath();
-      ring.forEach(([x, y], k) => (k ? g.lineTo(x, y) : g.moveTo(x, y)));
-      if (ring.length === 1) g.lineTo(ring[0][0] + 0.1, ring[0][1]);
-      g.closePath();
-      g.stroke();
+      traceAround(g, hull(points), 10);
+      g.fill();
     }
     g.globalAlpha = 1;
   }
@@ -221,27 +232,23 @@ function makeMap(run, hooks) {
   }
 
   // Discs, filled while the track has detections around this time, hollow when extrapolated.
+  // One call per disc: browsers draw single circles far quicker than one path of thousands.
   function drawStars(g) {
+    g.lineWidth = 1;
     for (const [isConfused, colour] of [[false, colours.calm], [true, colours.doubt]]) {
       g.fillStyle = colour;
       g.strokeStyle = colour;
-      g.lineWidth = 1;
-      const solid = new Path2D();
-      const hollow = new Path2D();
       for (let k = 0; k < run.nTracks; k++) {
         if (confused[k] !== isConfused || !drawn(k)) continue;
         const [x, y] = [px(now.x[k]), py(now.y[k])];
         if (!visible(x, y, 6)) continue;
-        const into = alive(k) ? solid : hollow;
-        if (!alive(k) && Math.min(Math.abs(view.t - T.first_yr[k]), Math.abs(view.t - T.last_yr[k])) > 3) continue;
-        const r = starRadius(k);
-        into.moveTo(x + r, y);
-        into.arc(x, y, r, 0, 2 * Math.PI);
+        const here = alive(k);
+        if (!here && Math.min(Math.abs(view.t - T.first_yr[k]), Math.abs(view.t - T.last_yr[k])) > 3) continue;
+        g.beginPath();
+        g.arc(x, y, starRadius(k), 0, 2 * Math.PI);
+        if (here) g.fill();
+        else g.stroke();
       }
-      g.fill(solid);
-      g.globalAlpha = 0.6;
-      g.stroke(hollow);
-      g.globalAlpha = 1;
     }
   }
 
@@ -479,6 +486,23 @@ function makeMap(run, hooks) {
       select(k);
     },
   };
+}
+
+// The outline of everything within a distance of a convex ring (in the sense of `hull`).
+function traceAround(g, ring, distance) {
+  const n = ring.length;
+  if (n < 2) {
+    if (n) { g.moveTo(ring[0][0] + distance, ring[0][1]); g.arc(...ring[0], distance, 0, 2 * Math.PI); }
+    return;
+  }
+  const angle = (a, b) => Math.atan2(a[0] - b[0], b[1] - a[1]);
+  for (let k = 0; k < n; k++) {
+    const [before, at, after] = [ring[(k + n - 1) % n], ring[k], ring[(k + 1) % n]];
+    const [from, to] = [angle(before, at), angle(at, after)];
+    if (k === 0) g.moveTo(at[0] + distance * Math.cos(from), at[1] + distance * Math.sin(from));
+    g.arc(at[0], at[1], distance, from, to);
+  }
+  g.closePath();
 }
 
 // Convex hull (Andrew 1979, monotone chain).

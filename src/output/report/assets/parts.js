@@ -22,6 +22,11 @@ function fill(element, attributes, children) {
   return element;
 }
 
+// Appends what is there; null and false stand for nothing.
+function put(element, ...children) {
+  return fill(element, {}, children);
+}
+
 function fixed(value, decimals) {
   if (value === null || value === undefined || !Number.isFinite(value)) return "";
   const text = value.toFixed(decimals);
@@ -35,6 +40,7 @@ function decimalsFor(error) {
 }
 
 function withError(value, error) {
+  if (!(error > 0)) return [fixed(value, 3)];
   const decimals = decimalsFor(error);
   return [fixed(value, decimals), h("span", { class: "err" }, " ± " + fixed(error, decimals))];
 }

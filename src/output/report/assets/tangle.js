@@ -10,13 +10,13 @@ const CERTIFICATES = {
 
 function tanglesPage(run, main) {
   const list = run.header.tangles;
-  main.append(h("h1", {}, "Tangles"), leftOut(run),
+  put(main, h("h1", {}, "Tangles"), leftOut(run),
     h("p", { class: "lead" }, "Groups of tracks that compete for detections. The certificate says what is known about the chosen explanation."));
   if (!list.length) {
-    main.append(h("p", { class: "quiet" }, "No tracks compete for detections."));
+    put(main, h("p", { class: "quiet" }, "No tracks compete for detections."));
     return;
   }
-  main.append(sortedTable({
+  put(main, sortedTable({
     label: "Tangles",
     rows: list,
     sort: 1,
@@ -54,7 +54,7 @@ const VANISHES = 3;
 
 function tanglePage(run, main, tangle) {
   const shownRivals = tangle.rivals.slice(0, 11);
-  main.append(
+  put(main, 
     h("h1", {}, `Tangle ${tangle.number}`),
     h("p", { class: "lead" },
       `${tangle.n_tracks} tracks, ${tangle.n_detections} detections, ${tangle.n_epochs} epochs. Certificate “${tangle.certificate}”: ${CERTIFICATES[tangle.certificate]}`,
@@ -64,12 +64,12 @@ function tanglePage(run, main, tangle) {
   const base = ownersOf(run, tangle.tracks);
   const panels = [explanationPanel(run, tangle, null, base)];
   for (const rival of shownRivals) panels.push(explanationPanel(run, tangle, rival, base));
-  main.append(h("h2", {}, "Explanations side by side"),
+  put(main, h("h2", {}, "Explanations side by side"),
     h("p", { class: "quiet" }, "Each panel: the group on the sky, and below it the coordinate that separates the stars best, against time. Lines join a detection to the place its track predicts. Outlined detections change hands."),
     h("div", { class: "panels", tabindex: "0", role: "region", "aria-label": "Explanations side by side" }, panels));
-  if (!tangle.rivals.length) main.append(h("p", { class: "quiet" }, "No rival explanation was kept."));
+  if (!tangle.rivals.length) put(main, h("p", { class: "quiet" }, "No rival explanation was kept."));
   else {
-    main.append(h("h2", {}, "Rivals in words"), sortedTable({
+    put(main, h("h2", {}, "Rivals in words"), sortedTable({
       label: "Rivals",
       rows: tangle.rivals,
       columns: [
@@ -174,13 +174,13 @@ function groupChart(run, tracks, owners, changed, gone, onSky) {
     const g = svg("g", { class: `series s${i % 8}` });
     g.append(polyline(lines[i].map(([x, y]) => [f.px(x), f.py(y)]), { class: "line", "stroke-dasharray": gone.has(k) ? "3 4" : null }));
     const end = lines[i][lines[i].length - 1];
-    const text = svg("text", { x: f.px(end[0]) - 4, y: f.py(end[1]) - 5, "text-anchor": "end" }, T.name[k]);
+    const text = svg("text", labelPlace(f, end), T.name[k]);
     for (const q of points.filter((p) => p.mine.includes(k))) {
       const t = run.times[run.epochOfDet[q.d]];
       const foot = at(run.place(k, t), t);
       const dot = svg("g", { class: (changed.has(q.d) ? "changed " : "") + (q.mine.length > 1 ? "shared" : "") },
         svg("circle", { cx: f.px(q.p[0]), cy: f.py(q.p[1]), r: changed.has(q.d) ? 4.5 : 2.6 }),
-        q.mine.length > 1 ? svg("circle", { cx: f.px(q.p[0]), cy: f.py(q.p[1]), r: 5.5 + 2 * q.mine.indexOf(k) }) : null,
+        q.mine.length > 1 ? svg("circle", { class: "ring", cx: f.px(q.p[0]), cy: f.py(q.p[1]), r: 5.5 + 2 * q.mine.indexOf(k) }) : null,
         tipOf(run, q.d));
       g.append(svg("line", { x1: f.px(q.p[0]), y1: f.py(q.p[1]), x2: f.px(foot[0]), y2: f.py(foot[1]) }), dot);
     }
@@ -193,6 +193,12 @@ function groupChart(run, tracks, owners, changed, gone, onSky) {
     f.area.append(g);
   }
   return f.root;
+}
+
+// Beside the end of a path, kept inside the frame.
+function labelPlace(f, [x, y]) {
+  const right = f.px(x) < (f.box.left + f.box.right) / 2;
+  return { x: f.px(x) + (right ? 6 : -6), y: Math.max(f.box.top + 12, Math.min(f.box.bottom - 5, f.py(y) - 9)), "text-anchor": right ? "start" : "end" };
 }
 
 // The axis along which the tracks of a group differ more.

@@ -37,7 +37,7 @@ function tracksPage(run, main) {
   };
   words.addEventListener("input", narrow);
   flag.addEventListener("change", narrow);
-  main.append(h("h1", {}, "Tracks"), leftOut(run), h("div", { class: "filter" }, words, flag, count),
+  put(main, h("h1", {}, "Tracks"), leftOut(run), h("div", { class: "filter" }, words, flag, count),
     h("p", { class: "quiet" }, `Positions and velocities at ${run.header.reference_yr}, x toward east, y toward north.`),
     table.element);
   const wanted = new URLSearchParams(location.hash.split("?")[1] || "").get("flag");
@@ -81,19 +81,19 @@ function trackPage(run, main, k) {
   const name = T.name[k];
   const history = historyOf(run, k);
   const step = (to, text) => to >= 0 && to < run.nTracks && h("a", { href: routeOf("track", T.name[to]) }, text);
-  main.append(
+  put(main, 
     h("div", { class: "titleline" }, h("h1", {}, name), h("span", {}, flagChips(run, T.flags[k])),
       h("span", { class: "steps" }, step(k - 1, "‹ " + (T.name[k - 1] || "")), h("a", { href: routeOf("field") + "?at=" + encodeURIComponent(name) }, "On the map"), step(k + 1, (T.name[k + 1] || "") + " ›"))),
     h("p", { class: "lead" }, trackSentence(run, k, history)));
   if (!T.detailed[k]) {
-    main.append(h("div", { class: "notice" }, h("p", {}, "The detections of this track are not on this page, to keep it small. A page with them: "), h("p", {}, h("code", {}, `asterskein report RUN --track ${name}`))));
+    put(main, h("div", { class: "notice" }, h("p", {}, "The detections of this track are not on this page, to keep it small. A page with them: "), h("p", {}, h("code", {}, `asterskein report RUN --track ${name}`))));
   } else {
-    main.append(trackCharts(run, k, history));
-    main.append(h("p", { class: "quiet" }, "Disc: detection. Hollow: membership probability below 0.9. Ringed: shared with another track. Square: another track's detection within one resolution element. Cross: a free detection there. Triangle: nothing listed where the track was expected. Line and shade: model and its one-sigma band."));
+    put(main, trackCharts(run, k, history));
+    put(main, h("p", { class: "quiet" }, "Disc: detection. Hollow: membership probability below 0.9. Ringed: shared with another track. Square: another track's detection within one resolution element. Cross: a free detection there. Triangle: nothing listed where the track was expected. Line and shade: model and its one-sigma band."));
   }
-  main.append(trackNumbers(run, k));
-  if (T.detailed[k]) main.append(h("h2", {}, "Detections"), memberTable(run, history));
-  if (history.rivals.length) main.append(h("h2", {}, "Other detections within one resolution element"), rivalTable(run, k, history));
+  put(main, trackNumbers(run, k));
+  if (T.detailed[k]) put(main, h("h2", {}, "Detections"), memberTable(run, history));
+  if (history.rivals.length) put(main, h("h2", {}, "Other detections within one resolution element"), rivalTable(run, k, history));
 }
 
 function trackSentence(run, k, { own, missed }) {
