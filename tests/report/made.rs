@@ -333,12 +333,12 @@ fn columns(campaign: &Campaign, e: usize, list: &[Listed], half_mas: f64) -> (Ra
         .map(|d| Cov2::round(d.err_mas * d.err_mas))
         .collect();
     // Row numbers as a finder would give them: unrelated to the order in x.
-    let step = 7919 % n.max(1) + usize::from(n.is_multiple_of(7919));
+    let step = 7919 % n.max(1);
     let numbers = (0..n).map(|k| 1 + ((k * step) % n) as u64).collect();
     let raw = RawList {
         ids: if e == 1 {
             Ids::Text((0..n).map(|k| format!("s{k}\"<i>")).collect())
-        } else if (1..n).all(|k| (k * step) % n != 0) {
+        } else if (1..n).all(|k| !(k * step).is_multiple_of(n)) {
             Ids::Numbers(numbers)
         } else {
             Ids::Numbers((1..=n as u64).collect())
@@ -470,7 +470,7 @@ fn tangles(
         for &k in &tracks {
             solution.tracks[k].tangle = Some(number);
             solution.tracks[k].flags.set(Flags::MERGED);
-            if number % 3 == 0 {
+            if number.is_multiple_of(3) {
                 solution.tracks[k].flags.set(Flags::AMBIGUOUS);
             }
         }
