@@ -1,5 +1,7 @@
 //! All integration tests, one binary.
+mod layering;
 mod motion;
 mod reading;
 mod report;
+mod results;
 mod solver;

@@ -38,11 +38,31 @@ pub fn write(table: &Table<'_>, out: &mut dyn Write) -> io::Result<()> {
     Ok(())
 }
 
-/// The YAML header and the line of names.
+/// The YAML header in comment lines, and the line of names.
 fn header(table: &Table<'_>) -> String {
-    let mut h = String::from("# %ECSV 1.0\n# ---\n# delimiter: ','\n# datatype:\n");
+    let mut h = String::from("# %ECSV 1.0\n# ---\n# delimiter: ','\n");
+    for line in yaml(table).lines() {
+        h.push_str("# ");
+        h.push_str(line);
+        h.push('\n');
+    }
+    let mut names = Vec::new();
+    for (k, c) in table.columns.iter().enumerate() {
+        if k > 0 {
+            names.push(b',');
+        }
+        push_text(&mut names, &c.name);
+    }
+    h.push_str(&String::from_utf8_lossy(&names));
+    h.push('\n');
+    h
+}
+
+/// Names, types, units and descriptions as YAML.
+pub(super) fn yaml(table: &Table<'_>) -> String {
+    let mut h = String::from("datatype:\n");
     for c in &table.columns {
-        h.push_str("# - {name: ");
+        h.push_str("- {name: ");
         h.push_str(&quoted(&c.name));
         if !c.unit.is_empty() {
             h.push_str(", unit: ");
@@ -61,20 +81,11 @@ fn header(table: &Table<'_>) -> String {
         }
         h.push_str("}\n");
     }
-    h.push_str("# meta: {name: ");
+    h.push_str("meta: {name: ");
     h.push_str(&quoted(&table.name));
     h.push_str(", description: ");
     h.push_str(&quoted(&table.description));
-    h.push_str("}\n# schema: astropy-2.0\n");
-    let mut names = Vec::new();
-    for (k, c) in table.columns.iter().enumerate() {
-        if k > 0 {
-            names.push(b',');
-        }
-        push_text(&mut names, &c.name);
-    }
-    h.push_str(&String::from_utf8_lossy(&names));
-    h.push('\n');
+    h.push_str("}\nschema: astropy-2.0\n");
     h
 }
 

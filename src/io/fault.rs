@@ -158,6 +158,8 @@ pub enum FaultKind {
     },
     #[error("unit `{found}` does not fit: expected {expected}")]
     Unit { found: String, expected: String },
+    #[error("contradicts the ruling at line {line}: {reason}")]
+    Contradiction { line: usize, reason: String },
     #[error("malformed {format}: {reason}")]
     Format { format: String, reason: String },
 }

@@ -7,13 +7,21 @@ pub mod ecsv_read;
 pub mod ecsv_write;
 pub mod fault;
 pub mod files;
+pub mod fits_write;
+pub mod format;
 pub mod lists;
 pub mod number_text;
+#[cfg(feature = "parquet")]
+pub mod parquet_write;
+pub mod read_run;
 pub mod result_tables;
+pub mod rulings;
 pub mod run_dir;
 pub mod run_info;
 pub mod table;
 pub mod unit_text;
+pub mod votable_write;
+pub mod write_run;
 
 mod columns;
 mod delimited;

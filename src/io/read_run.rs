@@ -60,7 +60,11 @@ fn changed(inputs: &[ChangedInput]) -> String {
     const SHOWN: usize = 10;
     let mut text = String::from("the result does not fit its inputs any more; link again");
     for i in inputs.iter().take(SHOWN) {
-        let what = if i.missing { "is missing" } else { "has changed" };
+        let what = if i.missing {
+            "is missing"
+        } else {
+            "has changed"
+        };
         text.push_str(&format!("\n  {} {what}", i.path.display()));
     }
     if inputs.len() > SHOWN {
@@ -87,7 +91,11 @@ pub fn read_run(folder: &Path) -> Result<Run, RunError> {
         epochs: read("epochs")?,
         tangles: read("tangles")?,
         rivals: read("rivals")?,
-        orbits: campaign.central.is_some().then(|| read("orbits")).transpose()?,
+        orbits: campaign
+            .central
+            .is_some()
+            .then(|| read("orbits"))
+            .transpose()?,
     };
     let (epochs, solution) =
         rebuild(&campaign, &lists, &info.regions, &tables).map_err(|e| RunError::BadTable {
@@ -167,8 +175,14 @@ fn check_inputs(folder: &Path, info: &RunInfo) -> Result<(), RunError> {
             };
             match run_info::sha256(&path) {
                 Ok(digest) if digest == i.sha256 => None,
-                Ok(_) => Some(ChangedInput { path, missing: false }),
-                Err(_) => Some(ChangedInput { path, missing: true }),
+                Ok(_) => Some(ChangedInput {
+                    path,
+                    missing: false,
+                }),
+                Err(_) => Some(ChangedInput {
+                    path,
+                    missing: true,
+                }),
             }
         })
         .collect();

@@ -56,7 +56,7 @@ pub struct SavedNote {
 impl From<&Note> for SavedNote {
     fn from(n: &Note) -> Self {
         Self {
-            what: n.what.to_string(),
+            what: n.what.to_owned(),
             place: n.place.clone(),
             text: n.text.clone(),
         }

@@ -1,3 +1,4 @@
 //! What is derived from a result: pictures for people, tables for fitters, names that last.
 
+pub mod naming;
 pub mod report;

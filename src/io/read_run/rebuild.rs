@@ -4,7 +4,9 @@ use std::collections::BTreeMap;
 
 use nalgebra::{SMatrix, SVector};
 
-use super::super::result_tables::{COVARIANCE_PAIRS, ELEMENTS, SKY, STATE, TERMS, error_name, suffix};
+use super::super::result_tables::{
+    COVARIANCE_PAIRS, ELEMENTS, SKY, STATE, TERMS, error_name, suffix,
+};
 use super::super::run_info::SavedRegion;
 use super::super::table::Table;
 use super::Misfit;
@@ -85,10 +87,12 @@ fn count(v: Option<i64>) -> usize {
 }
 
 fn find(names: &BTreeMap<String, usize>, name: &str, table: &str) -> Result<usize, Misfit> {
-    names
-        .get(name)
-        .copied()
-        .ok_or_else(|| misfit(table, format!("track `{name}` is not in the table of tracks")))
+    names.get(name).copied().ok_or_else(|| {
+        misfit(
+            table,
+            format!("track `{name}` is not in the table of tracks"),
+        )
+    })
 }
 
 /// Columns of one table, fetched by name once.
@@ -120,13 +124,29 @@ fn read_tracks(table: &Table<'_>, t_ref_yr: f64, with_orbits: bool) -> Result<Ve
     let names = table.texts("track")?;
     let models = table.texts("model")?;
     let flags = table.texts("flags")?;
-    let [n_members, dof, tangle] =
-        [table.ints("n_members")?, table.ints("dof")?, table.ints("tangle")?];
+    let [n_members, dof, tangle] = [
+        table.ints("n_members")?,
+        table.ints("dof")?,
+        table.ints("tangle")?,
+    ];
     let mut n = Numbers::new(table);
     for name in [
-        "first_yr", "last_yr", "mean_epoch_yr", "x_mean_mas", "y_mean_mas", "x_mean_err_mas",
-        "y_mean_err_mas", "vx_mean_mas_yr", "vy_mean_mas_yr", "vx_mean_err_mas_yr",
-        "vy_mean_err_mas_yr", "mag", "mag_scatter", "chi2", "ln_evidence", "probability",
+        "first_yr",
+        "last_yr",
+        "mean_epoch_yr",
+        "x_mean_mas",
+        "y_mean_mas",
+        "x_mean_err_mas",
+        "y_mean_err_mas",
+        "vx_mean_mas_yr",
+        "vy_mean_mas_yr",
+        "vx_mean_err_mas_yr",
+        "vy_mean_err_mas_yr",
+        "mag",
+        "mag_scatter",
+        "chi2",
+        "ln_evidence",
+        "probability",
     ] {
         n.load(name)?;
     }
@@ -529,7 +549,11 @@ fn read_epochs(table: &Table<'_>) -> Result<Vec<EpochReport>, Misfit> {
     let flags = table.texts("flags")?;
     let mut n = Numbers::new(table);
     for name in [
-        "rms_mas", "error_factor", "error_floor_mas", "limit_mag", "zero_point_mag",
+        "rms_mas",
+        "error_factor",
+        "error_floor_mas",
+        "limit_mag",
+        "zero_point_mag",
         "zero_point_err_mag",
     ] {
         n.load(name)?;
@@ -541,7 +565,8 @@ fn read_epochs(table: &Table<'_>) -> Result<Vec<EpochReport>, Misfit> {
         }
     }
     let terms = |k: usize, end: &str| {
-        ["x", "y"].map(|axis| TERMS.map(|term| zero_if_none(n.at(&format!("{axis}_{term}{end}"), k))))
+        ["x", "y"]
+            .map(|axis| TERMS.map(|term| zero_if_none(n.at(&format!("{axis}_{term}{end}"), k))))
     };
     Ok((0..table.n_rows())
         .map(|k| EpochReport {
@@ -570,8 +595,11 @@ fn read_tangles(
     let tracks = table.texts("tracks")?;
     let certificates = table.texts("certificate")?;
     let gaps = table.floats("gap_nats")?;
-    let [n_detections, n_epochs, work] =
-        [table.ints("n_detections")?, table.ints("n_epochs")?, table.ints("work")?];
+    let [n_detections, n_epochs, work] = [
+        table.ints("n_detections")?,
+        table.ints("n_epochs")?,
+        table.ints("work")?,
+    ];
     let flags = table.texts("flags")?;
     (0..table.n_rows())
         .map(|k| {

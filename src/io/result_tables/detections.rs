@@ -38,7 +38,7 @@ pub(super) fn members(view: RunView<'_>) -> Table<'_> {
             Decimals(6),
             |k| m[k].share,
         )
-        .ucd("arith.ratio;phot.flux")
+        .ucd("phot.flux;arith.ratio")
         .float(
             "dx_mas",
             "mas",

@@ -74,7 +74,7 @@ pub(super) fn epochs(view: RunView<'_>) -> Table<'_> {
             Decimals(5),
             |k| e[k].error_factor,
         )
-        .ucd("arith.factor;stat.error")
+        .ucd("arith.factor")
         .float(
             "error_floor_mas",
             "mas",

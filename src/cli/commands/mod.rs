@@ -1,0 +1,5 @@
+//! One file per command.
+
+pub mod check;
+pub mod list;
+pub mod shell;
