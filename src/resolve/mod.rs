@@ -3,4 +3,6 @@
 pub mod bound;
 pub mod exact;
 pub mod pack;
+pub mod posterior;
 pub mod program;
+pub mod rivals;

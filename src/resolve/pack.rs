@@ -19,13 +19,29 @@ pub struct Packed {
     pub exact: bool,
 }
 
-/// Reusable memory of [`Packer::epoch`].
+/// What a packing may not do.
+#[derive(Clone, Copy, Debug)]
+pub struct Rules<'a> {
+    /// Which tracks may take part.
+    pub exists: &'a [bool],
+    /// A source that may not be used, or [`FALSE`].
+    pub banned: u32,
+}
+
+impl Rules<'_> {
+    pub(super) fn open(&self, program: &Program, source: usize) -> bool {
+        source != self.banned as usize && program.tracks(source).all(|k| self.exists[k])
+    }
+}
+
+/// Reusable memory of packings.
 #[derive(Clone, Debug, Default)]
 pub struct Packer {
     used: Vec<bool>,
     /// Detection that used a cell first, while components are formed.
     owner: Vec<u32>,
     parent: Vec<u32>,
+    seen: Vec<bool>,
     search: Search,
 }
 
@@ -41,6 +57,10 @@ impl Packer {
         budget: u64,
         made_by: &mut [u32],
     ) -> Packed {
+        let rules = Rules {
+            exists,
+            banned: FALSE,
+        };
         let detections = program.epoch(epoch);
         let start = detections.start;
         self.used
@@ -51,7 +71,7 @@ impl Packer {
         self.parent.extend(0..detections.len() as u32);
         for d in detections.clone() {
             made_by[d] = FALSE;
-            for s in program.sources(d).filter(|&s| open(program, s, exists)) {
+            for s in program.sources(d).filter(|&s| rules.open(program, s)) {
                 for &c in program.cells(s) {
                     match self.owner[c as usize] {
                         FALSE => self.owner[c as usize] = (d - start) as u32,
@@ -70,7 +90,7 @@ impl Packer {
         };
         for component in order.chunk_by(|a, b| a.0 == b.0) {
             let wanted = component.iter().map(|&(_, d)| start + d as usize);
-            self.search.load(program, wanted, exists, price);
+            self.search.load(program, wanted, rules, price);
             let done = self
                 .search
                 .run(program, &mut self.used, budget.saturating_sub(out.nodes));
@@ -90,10 +110,69 @@ impl Packer {
         }
         out
     }
-}
 
-fn open(program: &Program, source: usize, exists: &[bool]) -> bool {
-    program.tracks(source).all(|k| exists[k])
+    /// Detections of one epoch tied to `seed` by sources that may be used, sorted.
+    pub fn tied(
+        &mut self,
+        program: &Program,
+        epoch: usize,
+        rules: Rules,
+        seeds: &[u32],
+    ) -> Vec<u32> {
+        self.seen
+            .resize(program.n_detections().max(self.seen.len()), false);
+        let mut list: Vec<u32> = Vec::with_capacity(seeds.len());
+        for &d in seeds {
+            if !std::mem::replace(&mut self.seen[d as usize], true) {
+                list.push(d);
+            }
+        }
+        let mut next = 0;
+        while next < list.len() {
+            for s in program
+                .sources(list[next] as usize)
+                .filter(|&s| rules.open(program, s))
+            {
+                for &c in program.cells(s) {
+                    for &other in program.sources_of_cell(c as usize, epoch) {
+                        if !rules.open(program, other as usize) {
+                            continue;
+                        }
+                        let d = program.detection_of(other as usize);
+                        if !std::mem::replace(&mut self.seen[d], true) {
+                            list.push(d as u32);
+                        }
+                    }
+                }
+            }
+            next += 1;
+        }
+        list.iter().for_each(|&d| self.seen[d as usize] = false);
+        list.sort_unstable();
+        list
+    }
+
+    /// Packs some detections of one epoch, which must hold everything tied to them (see
+    /// [`Packer::tied`]).
+    pub fn some(
+        &mut self,
+        program: &Program,
+        detections: &[u32],
+        rules: Rules,
+        budget: u64,
+        made_by: &mut [u32],
+    ) -> Packed {
+        self.used
+            .resize(program.n_cells().max(self.used.len()), false);
+        let wanted = detections.iter().map(|&d| d as usize);
+        self.search.load(program, wanted, rules, &[]);
+        let done = self.search.run(program, &mut self.used, budget);
+        detections.iter().for_each(|&d| made_by[d as usize] = FALSE);
+        for (d, pick) in self.search.detections.iter().zip(&self.search.best) {
+            made_by[*d as usize] = *pick;
+        }
+        done
+    }
 }
 
 fn find(parent: &mut [u32], mut k: u32) -> u32 {
@@ -134,7 +213,7 @@ impl Search {
         &mut self,
         program: &Program,
         detections: impl Iterator<Item = usize>,
-        exists: &[bool],
+        rules: Rules,
         price: &[f64],
     ) {
         let of_cell = |c: u32| price.get(c as usize).copied().unwrap_or(0.0);
@@ -142,7 +221,7 @@ impl Search {
             |s: usize| program.gain(s) - program.cells(s).iter().map(|&c| of_cell(c)).sum::<f64>();
         let mut ordered: Vec<(f64, usize)> = detections
             .filter_map(|d| {
-                let mut open = program.sources(d).filter(|&s| open(program, s, exists));
+                let mut open = program.sources(d).filter(|&s| rules.open(program, s));
                 open.next().map(|s| (program.gain(s), d))
             })
             .collect();
@@ -156,7 +235,7 @@ impl Search {
         let mut cells: Vec<u32> = Vec::new();
         for (_, d) in ordered {
             let start = self.sources.len();
-            for s in program.sources(d).filter(|&s| open(program, s, exists)) {
+            for s in program.sources(d).filter(|&s| rules.open(program, s)) {
                 self.sources.push(s as u32);
                 cells.extend_from_slice(program.cells(s));
             }

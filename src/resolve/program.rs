@@ -24,6 +24,7 @@ pub const FALSE: u32 = u32::MAX;
 /// A program under construction.
 #[derive(Clone, Debug, Default)]
 pub struct Builder {
+    keep_above: f64,
     base: Vec<f64>,
     forced: Vec<bool>,
     family: Vec<u32>,
@@ -40,6 +41,16 @@ struct Draft {
 }
 
 impl Builder {
+    /// Keeps sources whose gain exceeds this; by default those that gain anything. Probabilities
+    /// need the losing ones as well, the best choice does not.
+    #[must_use]
+    pub fn keeping(gain_above: f64) -> Self {
+        Self {
+            keep_above: gain_above,
+            ..Self::default()
+        }
+    }
+
     /// Adds a track that may exist; returns its number.
     pub fn track(&mut self, base: f64) -> u32 {
         let k = self.base.len() as u32;
@@ -65,10 +76,10 @@ impl Builder {
         }
     }
 
-    /// Adds a set of tracks that may have made a detection. One that gains nothing is left out:
-    /// its tracks could as well have been missed.
+    /// Adds a set of tracks that may have made a detection. One that gains too little is left out
+    /// (see [`Builder::keeping`]): its tracks could as well have been missed.
     pub fn source(&mut self, epoch: u32, detection: u32, tracks: &[u32], gain: f64) {
-        if gain > 0.0 && !tracks.is_empty() {
+        if gain > self.keep_above && !tracks.is_empty() {
             let start = self.members.len();
             self.members.extend_from_slice(tracks);
             self.members[start..].sort_unstable();
@@ -249,6 +260,18 @@ impl Program {
         let range =
             self.sources_of_track[track] as usize..self.sources_of_track[track + 1] as usize;
         &self.track_sources[range]
+    }
+    /// Sources that use a cell of the k-th epoch, in order.
+    #[must_use]
+    pub fn sources_of_cell(&self, cell: usize, epoch: usize) -> &[u32] {
+        let of_track = self.sources_of_track(self.track_of(cell));
+        let detections = self.epoch(epoch);
+        let (lo, hi) = (
+            self.sources_of[detections.start],
+            self.sources_of[detections.end],
+        );
+        let from = of_track.partition_point(|&s| s < lo);
+        &of_track[from..of_track.partition_point(|&s| s < hi)]
     }
     /// Detection a source belongs to.
     #[must_use]

@@ -4,4 +4,5 @@
 mod assignment;
 mod links;
 mod neighbours;
+mod probabilities;
 mod tangles;

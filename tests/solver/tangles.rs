@@ -50,7 +50,7 @@ fn try_makers(p: &Program, e: &mut Explanation, d: usize) -> f64 {
 /// Tangles of `tracks` tracks over a few epochs: singles and groups of up to three, gains and
 /// worths of the same size, so that much is undecided; now and then alternatives or a track
 /// that must exist.
-fn tangle(tracks: std::ops::RangeInclusive<usize>) -> impl Strategy<Value = Program> {
+pub fn tangle(tracks: std::ops::RangeInclusive<usize>) -> impl Strategy<Value = Program> {
     tracks.prop_flat_map(|n| {
         let base = prop::collection::vec(-12.0..1.0f64, n);
         let member = prop::collection::vec(0..n as u32, 1..=3);
