@@ -14,3 +14,5 @@ pub mod motion;
 pub mod near;
 pub mod output;
 pub mod resolve;
+pub mod sensor;
+pub mod track;

@@ -1,7 +1,11 @@
 //! The order of stages, and everything that runs in parallel.
 
 pub mod observer;
+pub mod pipeline;
+pub mod prepare;
+pub mod rounds;
 pub mod settings;
 
 pub use observer::{Observer, Silent};
+pub use pipeline::{EngineError, link};
 pub use settings::Settings;

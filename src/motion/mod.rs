@@ -8,5 +8,7 @@ pub mod linear;
 pub mod orbit_columns;
 pub mod orbit_fit;
 pub mod start;
+pub mod state;
+pub mod state_fit;
 pub mod terms;
 pub mod three_points;

@@ -1,0 +1,111 @@
+//! A whole run: scene, rounds, beliefs, proofs, tables' content.
+
+use rayon::prelude::*;
+
+use super::observer::Observer;
+use super::settings::Settings;
+use super::{prepare, rounds};
+use crate::maths::lnprob::logistic;
+use crate::model::campaign::Campaign;
+use crate::model::detection::FieldEpoch;
+use crate::model::result::Solution;
+use crate::resolve::belief::{self, Beliefs};
+use crate::resolve::grow::{self, Scratch};
+use crate::resolve::joint::{self, Choices};
+use crate::resolve::scene::Scene;
+use crate::resolve::work::Work;
+use crate::track::assemble::{self, Parts};
+use crate::track::proof::{self, Proved, Tangle};
+
+/// The run could not be started.
+#[derive(Debug, thiserror::Error)]
+pub enum EngineError {
+    #[error("no worker threads could be started: {0}")]
+    Threads(#[from] rayon::ThreadPoolBuildError),
+    #[error("the campaign has {campaign} epochs but {lists} lists were handed in")]
+    Mismatch { campaign: usize, lists: usize },
+}
+
+/// Link a campaign whose lists are in the common frame.
+///
+/// # Errors
+/// When lists and epochs do not correspond, or no threads can be started.
+pub fn link(
+    campaign: &Campaign,
+    epochs: &[FieldEpoch],
+    settings: &Settings,
+    observer: &dyn Observer,
+) -> Result<Solution, EngineError> {
+    if campaign.epochs.len() != epochs.len() {
+        return Err(EngineError::Mismatch {
+            campaign: campaign.epochs.len(),
+            lists: epochs.len(),
+        });
+    }
+    let pool = rayon::ThreadPoolBuilder::new()
+        .num_threads(settings.threads)
+        .build()?;
+    Ok(pool.install(|| {
+        let mut scene = prepare::scene(campaign, epochs);
+        let work = rounds::run(&mut scene, observer);
+        conclude(campaign, epochs, &scene, work, observer)
+    }))
+}
+
+/// Beliefs, proofs and tables of a finished search.
+fn conclude(
+    campaign: &Campaign,
+    epochs: &[FieldEpoch],
+    scene: &Scene,
+    mut work: Work,
+    observer: &dyn Observer,
+) -> Solution {
+    observer.stage("weighing", None);
+    let choices: Vec<Choices> = (0..scene.sights.len())
+        .into_par_iter()
+        .map(|e| joint::choices(scene, e, &work.desks[e]))
+        .collect();
+    let n = work.stars.len();
+    let beliefs: Vec<Beliefs> = choices
+        .par_iter()
+        .map(|c| belief::beliefs(c, n, BELIEF_TEMPERATURE))
+        .collect();
+    let worth: Vec<f64> = (0..n as u32)
+        .into_par_iter()
+        .map_init(Scratch::default, |sc, k| {
+            grow::worth(scene, &work, &work.stars[k as usize], Some(k), sc)
+        })
+        .collect();
+    for (star, w) in work.stars.iter_mut().zip(&worth) {
+        star.worth = *w;
+    }
+    let real: Vec<f64> = worth
+        .iter()
+        .map(|w| logistic((w - REAL_MIDDLE_NATS) / REAL_WIDTH_NATS))
+        .collect();
+    observer.stage("proving", None);
+    let groups = proof::groups(&choices, n);
+    let proved = Proved {
+        tangles: groups
+            .into_par_iter()
+            .filter(|g| g.len() >= 2)
+            .map(|g| proof::prove(scene, &work, &choices, &g))
+            .collect::<Vec<Tangle>>(),
+    };
+    observer.stage("tables", None);
+    assemble::assemble(&Parts {
+        campaign,
+        epochs,
+        scene,
+        work: &work,
+        beliefs: &beliefs,
+        real: &real,
+        proved: &proved,
+    })
+}
+
+/// Gains are divided by this before beliefs are formed: models are never quite right.
+const BELIEF_TEMPERATURE: f64 = 2.0;
+/// P(real) of a track is 1 / (1 + exp(-(worth - middle) / width)).
+const REAL_MIDDLE_NATS: f64 = 4.0;
+const REAL_WIDTH_NATS: f64 = 6.0;

@@ -1,0 +1,18 @@
+//! Density of false detections per mas^2 and magnitude.
+//!
+//! lambda(m, place) = share x (density of all detections there and at that magnitude), plus a
+//! uniform floor: unknown faint stars and artefacts crowd where stars crowd. The local density
+//! is measured over all epochs of an instrument, the share estimated from the leftovers.
+
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct FalseLaw {
+    /// False and unknown detections as a share of all.
+    pub share: f64,
+}
+
+impl FalseLaw {
+    #[must_use]
+    pub fn start() -> Self {
+        Self { share: 0.10 }
+    }
+}

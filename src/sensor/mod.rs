@@ -1,0 +1,29 @@
+//! The observing laws that make up the cost: who is seen, who is resolved, how wrong positions
+//! and magnitudes are, and how many detections are false. Each law starts from wide defaults
+//! and is estimated from the lists.
+
+pub mod blend;
+pub mod depth;
+pub mod errors;
+pub mod falses;
+pub mod pairs;
+
+use depth::Depth;
+use errors::ErrorLaw;
+use falses::FalseLaw;
+use pairs::PairLaw;
+
+/// All laws of one epoch.
+#[derive(Clone, Debug)]
+pub struct Sensor {
+    pub fwhm_mas: f64,
+    pub depth: Depth,
+    pub errors: ErrorLaw,
+    pub pairs: PairLaw,
+    pub falses: FalseLaw,
+    pub blend: crate::model::campaign::BlendLaw,
+    /// Magnitude to add to this epoch's list to bring it to the common scale.
+    pub zero_point_mag: f64,
+    /// Absence means nothing and no star is born here.
+    pub targeted: bool,
+}

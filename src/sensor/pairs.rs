@@ -1,0 +1,113 @@
+//! Which pairs of stars become one detection.
+//!
+//! P(merged | s, dm) = top / (1 + exp((s / fwhm - limit - slope min(|dm|, 6)) / width)): half of the
+//! pairs merge at limit + slope |dm|. (For equal Gaussian profiles two peaks need
+//! s > 0.85 fwhm; fitting with a known profile goes lower, plain peak finding does not.)
+//! Parameters per instrument, estimated from pairs of tracks seen merged and apart.
+
+use crate::maths::lnprob::logistic;
+
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct PairLaw {
+    /// Half-merge separation of equal stars \[fwhm\].
+    pub limit_fwhm: f64,
+    /// Its growth per magnitude of difference \[fwhm/mag\].
+    pub slope_fwhm: f64,
+    pub width_fwhm: f64,
+}
+
+/// Highest and lowest chance: no outcome is impossible.
+const TOP: f64 = 0.985;
+const BOTTOM: f64 = 1e-5;
+
+impl PairLaw {
+    /// Start, before anything is known of an instrument.
+    #[must_use]
+    pub fn start() -> Self {
+        Self {
+            limit_fwhm: 0.65,
+            slope_fwhm: 0.10,
+            width_fwhm: 0.08,
+        }
+    }
+
+    /// Chance that a pair at a separation \[fwhm\] with a magnitude difference is one detection.
+    #[must_use]
+    pub fn merged(&self, sep_fwhm: f64, dmag: f64) -> f64 {
+        let limit = self.limit_fwhm + self.slope_fwhm * dmag.abs().min(6.0);
+        (TOP * logistic((limit - sep_fwhm) / self.width_fwhm)).max(BOTTOM)
+    }
+
+    /// Separation \[fwhm\] beyond which merging can be ignored.
+    #[must_use]
+    pub fn reach_fwhm(&self) -> f64 {
+        self.limit_fwhm + 6.0 * self.slope_fwhm + 6.0 * self.width_fwhm
+    }
+}
+
+/// A pair of tracks at an epoch: predicted separation and what happened.
+#[derive(Clone, Copy, Debug)]
+pub struct PairEvent {
+    pub sep_fwhm: f64,
+    pub dmag: f64,
+    pub merged: bool,
+}
+
+/// Refit to events, shrunk towards the start (one pseudo-observation per parameter).
+#[must_use]
+pub fn refit(start: PairLaw, events: &[PairEvent]) -> PairLaw {
+    let score = |l: &PairLaw| -> f64 {
+        let ln: f64 = events
+            .iter()
+            .map(|e| {
+                let p = l.merged(e.sep_fwhm, e.dmag).clamp(0.01, 0.985);
+                if e.merged { p.ln() } else { (1.0 - p).ln() }
+            })
+            .sum();
+        let a = (l.limit_fwhm - start.limit_fwhm) / 0.25;
+        let b = (l.slope_fwhm - start.slope_fwhm) / 0.05;
+        let c = (l.width_fwhm / start.width_fwhm).ln() / 0.5;
+        ln - 0.5 * (a * a + b * b + c * c)
+    };
+    let mut best = (score(&start), start);
+    let mut step = 1.0;
+    for _ in 0..6 {
+        for _ in 0..2 {
+            let o = best.1;
+            for k in -3i32..=3 {
+                let t = PairLaw {
+                    limit_fwhm: (o.limit_fwhm + 0.1 * step * f64::from(k)).clamp(0.15, 2.0),
+                    ..best.1
+                };
+                let s = score(&t);
+                if s > best.0 {
+                    best = (s, t);
+                }
+            }
+            let o = best.1;
+            for k in -3i32..=3 {
+                let t = PairLaw {
+                    slope_fwhm: (o.slope_fwhm + 0.03 * step * f64::from(k)).clamp(0.0, 0.35),
+                    ..best.1
+                };
+                let s = score(&t);
+                if s > best.0 {
+                    best = (s, t);
+                }
+            }
+            let o = best.1;
+            for k in -3i32..=3 {
+                let t = PairLaw {
+                    width_fwhm: (o.width_fwhm * (0.3 * step * f64::from(k)).exp()).clamp(0.02, 0.3),
+                    ..best.1
+                };
+                let s = score(&t);
+                if s > best.0 {
+                    best = (s, t);
+                }
+            }
+        }
+        step *= 0.55;
+    }
+    best.1
+}

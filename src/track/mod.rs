@@ -1,0 +1,6 @@
+//! From the state of the search to the tables' tracks, memberships, leftovers and tangles.
+
+pub mod assemble;
+pub mod flags;
+pub mod proof;
+pub mod summary;
