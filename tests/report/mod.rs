@@ -1,6 +1,6 @@
 //! The report: what it holds, how large it gets, what it does with hostile names.
 //!
-//! How it behaves in a browser is checked by `tests/outside/report_browser.py`, on pages that
+//! How it behaves in a browser is checked by `tests/outside/test_report_browser.py`, on pages that
 //! [`write_pages`] leaves where `ASTERSKEIN_REPORT_PAGES` says.
 
 mod made;

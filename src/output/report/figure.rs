@@ -26,7 +26,7 @@ impl Default for FigureStyle {
 }
 
 const CALM: &str = "#2b5d9b";
-const DOUBT: &str = "#c05a00";
+const DOUBT: &str = "#b05200";
 const MERGED: &str = "#7a2f8f";
 const INK: &str = "#1c2230";
 
