@@ -46,6 +46,8 @@ pub enum Command {
     Check(commands::check::Args),
     /// Print a table of a result, or some rows and columns of it.
     List(commands::list::Args),
+    /// Draw a result again, or a part of it.
+    Report(commands::report::Args),
     /// Print completions for a shell.
     #[command(hide = true)]
     Completions(commands::shell::Args),

@@ -99,6 +99,17 @@ impl Change {
         })
     }
 
+    /// The detection that changes hands, where there is one.
+    #[must_use]
+    pub fn into_detection(self) -> Option<DetectionName> {
+        match self {
+            Self::Takes { detection, .. }
+            | Self::Shares { detection, .. }
+            | Self::Drops { detection, .. } => Some(detection),
+            Self::Vanishes { .. } => None,
+        }
+    }
+
     /// Joins clauses into the text of a rival.
     #[must_use]
     pub fn sentence(changes: &[Self]) -> String {

@@ -2,7 +2,7 @@
 
 Two kinds of pages are looked at: those of a made-up result with hostile names, written by
 `cargo test --test suite report::write_pages` (or found where ASTERSKEIN_REPORT_PAGES says), and
-the report that `link` writes for the demo, when the program ($ASTERSKEIN) and the demo are there.
+the report that `link` writes for the demo.
 Screenshots for looking at go where REPORT_SHOTS says, else to a temporary folder.
 """
 
@@ -56,15 +56,11 @@ def made(tmp_path_factory):
 
 
 @pytest.fixture(scope="session", params=["made", "linked"])
-def report(request, tmp_path_factory):
+def report(request):
     if request.param == "made":
         folder = request.getfixturevalue("made")
         return Report(folder / "small.html", folder)
-    program, demo = os.environ.get("ASTERSKEIN"), ROOT / "demo-data" / "campaign.toml"
-    if not program or not demo.exists():
-        pytest.skip("needs $ASTERSKEIN and the demo")
-    folder = tmp_path_factory.mktemp("linked") / "run"
-    subprocess.run([program, "link", str(demo), "--out", str(folder)], check=True)
+    folder = request.getfixturevalue("result")
     return Report(folder / "report.html", folder)
 
 

@@ -15,14 +15,17 @@ use asterskein::output::report::{
 };
 use made::{HOSTILE_NAME, Made, made};
 
-fn input<'a>(m: &'a Made, extras: &'a [ExtraTable]) -> ReportInput<'a> {
-    ReportInput {
+fn view(m: &Made) -> RunView<'_> {
+    RunView {
         campaign: &m.campaign,
-        epochs: &m.epochs,
         lists: &m.lists,
+        epochs: &m.epochs,
         solution: &m.solution,
-        extras,
     }
+}
+
+fn input<'a>(m: &'a Made, extras: &'a [ExtraTable]) -> ReportInput<'a> {
+    ReportInput::of(view(m), &m.solution.notes, extras)
 }
 
 fn page(m: &Made, scope: &Scope, budget: Budget) -> String {
@@ -78,15 +81,15 @@ fn a_part_is_smaller_than_the_whole() {
 #[test]
 fn figures_are_written_for_every_kind_of_motion() {
     let m = made(120, 12, 3);
-    let view = input(&m, &[]);
-    let map = field_map(&view, &Scope::Whole, FigureStyle::default());
+    let whole = input(&m, &[]);
+    let map = field_map(&whole, &Scope::Whole, FigureStyle::default());
     assert!(map.starts_with("<svg") && map.contains("Lantern core"));
     for track in [0, 1, 2, 3] {
-        let plot = track_plot(&view, track, FigureStyle::default()).expect("a plot");
+        let plot = track_plot(&whole, track, FigureStyle::default()).expect("a plot");
         assert!(!plot.contains("NaN") && !plot.contains("inf"));
         assert!(!plot.contains("<img"));
     }
-    assert!(track_plot(&view, 10_000, FigureStyle::default()).is_none());
+    assert!(track_plot(&whole, 10_000, FigureStyle::default()).is_none());
 }
 
 /// Pages and tables for a look in a browser, and the size and time of a large one.
@@ -98,12 +101,7 @@ fn write_pages() {
     let folder = Path::new(&folder);
     std::fs::create_dir_all(folder).unwrap();
     let m = made(600, 40, 11);
-    for table in result_tables::all(RunView {
-        campaign: &m.campaign,
-        lists: &m.lists,
-        epochs: &m.epochs,
-        solution: &m.solution,
-    }) {
+    for table in result_tables::all(view(&m)) {
         let mut out = Vec::new();
         ecsv_write::write(&table, &mut out).unwrap();
         std::fs::write(folder.join(format!("{}.ecsv", table.name)), out).unwrap();

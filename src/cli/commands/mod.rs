@@ -2,4 +2,5 @@
 
 pub mod check;
 pub mod list;
+pub mod report;
 pub mod shell;

@@ -4,7 +4,7 @@
 //! epoch. Positions are multiples of a quantum (0.001 mas on ordinary fields), so numbers on the
 //! page are those of the tables rounded to that.
 
-use std::collections::BTreeMap;
+use std::collections::{BTreeMap, BTreeSet};
 
 use serde::Serialize;
 
@@ -209,12 +209,7 @@ pub(super) fn build<'a>(
         paths,
         orbits,
         tangles,
-        notes: input
-            .solution
-            .notes
-            .iter()
-            .map(|n| [n.what, n.place.as_str(), n.text.as_str()])
-            .collect(),
+        notes: input.notes.clone(),
         extras: input.extras,
         columns: columns.specs.clone(),
     };
@@ -280,11 +275,7 @@ fn millimag(mag: f64) -> i32 {
 
 fn members(input: &ReportInput, selection: &Selection, quantum: f64, columns: &mut Columns) {
     let ranges = member_ranges(input);
-    let place: Vec<BTreeMap<usize, i32>> = selection
-        .rows
-        .iter()
-        .map(|rows| (0..).zip(rows).map(|(k, &row)| (row, k)).collect())
-        .collect();
+    let place = places(input, selection);
     let mut count = Vec::new();
     let mut col: [Vec<i32>; 7] = std::array::from_fn(|_| Vec::new());
     for (&track, &detailed) in selection.tracks.iter().zip(&selection.detailed) {
@@ -292,11 +283,11 @@ fn members(input: &ReportInput, selection: &Selection, quantum: f64, columns: &m
         if detailed {
             for m in &input.solution.members[ranges[track].clone()] {
                 // A membership of a detection that is not there cannot be drawn.
-                let Some(&det) = place.get(m.epoch).and_then(|p| p.get(&m.row)) else {
+                let Some(det) = place.get(m.epoch).and_then(|p| *p.get(m.row)?) else {
                     continue;
                 };
                 col[0].push(m.epoch as i32);
-                col[1].push(det);
+                col[1].push(det as i32);
                 col[2].push(quantise(m.probability, 1e-4));
                 col[3].push(quantise(m.share, 1e-4));
                 col[4].push(quantise(m.dx_mas, quantum));
@@ -320,11 +311,29 @@ fn members(input: &ReportInput, selection: &Selection, quantum: f64, columns: &m
     }
 }
 
+/// For each epoch and row: its place among the rows of that epoch on the page.
+fn places(input: &ReportInput, selection: &Selection) -> Vec<Vec<Option<u32>>> {
+    input
+        .epochs
+        .iter()
+        .zip(&selection.rows)
+        .map(|(epoch, rows)| {
+            let mut place = vec![None; epoch.len()];
+            for (k, &row) in (0..).zip(rows) {
+                place[row] = Some(k);
+            }
+            place
+        })
+        .collect()
+}
+
 fn counts(input: &ReportInput) -> Counts {
     let s = input.solution;
-    let mut holders: BTreeMap<(usize, usize), usize> = BTreeMap::new();
+    let mut holders: Vec<Vec<u8>> = input.epochs.iter().map(|e| vec![0; e.len()]).collect();
     for m in &s.members {
-        *holders.entry((m.epoch, m.row)).or_default() += 1;
+        if let Some(n) = holders.get_mut(m.epoch).and_then(|h| h.get_mut(m.row)) {
+            *n = n.saturating_add(1);
+        }
     }
     Counts {
         epochs: input.campaign.epochs.len(),
@@ -333,7 +342,7 @@ fn counts(input: &ReportInput) -> Counts {
         memberships: s.members.len(),
         leftovers: s.leftovers.len(),
         tangles: s.tangles.len(),
-        merged_detections: holders.values().filter(|&&n| n > 1).count(),
+        merged_detections: holders.iter().flatten().filter(|&&n| n > 1).count(),
         expected_wrong: round(s.members.iter().map(|m| 1.0 - m.probability).sum(), 1),
     }
 }
@@ -633,8 +642,8 @@ fn tangles<'a>(
 struct ChangeReader<'a> {
     tracks: BTreeMap<&'a str, usize>,
     epochs: BTreeMap<&'a str, usize>,
-    /// For each epoch: identifier to place on the page.
-    places: Vec<BTreeMap<String, usize>>,
+    /// For each epoch: identifier to place on the page, of those that some rival names.
+    places: Vec<BTreeMap<String, u32>>,
 }
 
 impl<'a> ChangeReader<'a> {
@@ -643,14 +652,29 @@ impl<'a> ChangeReader<'a> {
         selection: &Selection,
         page_track: &BTreeMap<usize, usize>,
     ) -> Self {
+        let epochs: BTreeMap<&str, usize> = (0..)
+            .zip(&input.campaign.epochs)
+            .map(|(k, e)| (e.name.as_str(), k))
+            .collect();
+        let mut named = vec![BTreeSet::new(); selection.rows.len()];
+        for rival in &input.solution.rivals {
+            for clause in rival.change.split("; ") {
+                if let Some(d) = Change::read(clause).and_then(Change::into_detection)
+                    && let Some(&e) = epochs.get(d.epoch_name.as_str())
+                {
+                    named[e].insert(d.id);
+                }
+            }
+        }
         let mut places = vec![BTreeMap::new(); selection.rows.len()];
-        if !input.solution.rivals.is_empty() {
-            for (e, rows) in selection.rows.iter().enumerate() {
-                if let Some(ids) = input.lists.get(e).map(|l| &l.ids) {
-                    places[e] = (0..)
-                        .zip(rows)
-                        .map(|(k, &row)| (ids.text(row), k))
-                        .collect();
+        for (e, wanted) in named.iter().enumerate().filter(|(_, w)| !w.is_empty()) {
+            let Some(list) = input.lists.get(e) else {
+                continue;
+            };
+            for (k, &row) in (0..).zip(&selection.rows[e]) {
+                let id = list.ids.text(row);
+                if wanted.contains(&id) {
+                    places[e].insert(id, k);
                 }
             }
         }
@@ -659,10 +683,7 @@ impl<'a> ChangeReader<'a> {
                 .iter()
                 .map(|(&k, &page)| (input.solution.tracks[k].name.as_str(), page))
                 .collect(),
-            epochs: (0..)
-                .zip(&input.campaign.epochs)
-                .map(|(k, e)| (e.name.as_str(), k))
-                .collect(),
+            epochs,
             places,
         }
     }
@@ -672,7 +693,7 @@ impl<'a> ChangeReader<'a> {
         let detection = |d: &DetectionName| {
             let &e = self.epochs.get(d.epoch_name.as_str())?;
             let &k = self.places[e].get(&d.id)?;
-            Some((k as i64, e as i64))
+            Some((i64::from(k), e as i64))
         };
         Some(match Change::read(clause)? {
             Change::Takes {

@@ -6,21 +6,25 @@
 
 mod columns;
 mod data;
+mod extras;
 mod figure;
 mod page;
 mod path;
 mod select;
 
+use crate::io::result_tables::RunView;
 use crate::model::campaign::Campaign;
 use crate::model::detection::{FieldEpoch, RawList};
+use crate::model::note::Note;
 use crate::model::result::Solution;
 
+pub use extras::{AUDIT, RECOVERY, read_extras};
 pub use figure::{FigureStyle, field_map, track_plot};
 pub use page::{ReportError, html};
 pub use select::{Budget, Scope};
 
 /// What a report is made from.
-#[derive(Clone, Copy, Debug)]
+#[derive(Clone, Debug)]
 pub struct ReportInput<'a> {
     pub campaign: &'a Campaign,
     /// One per epoch of the campaign, in its order.
@@ -28,8 +32,28 @@ pub struct ReportInput<'a> {
     /// The lists as read, for their identifiers; one per epoch.
     pub lists: &'a [RawList],
     pub solution: &'a Solution,
+    /// Findings that did not stop the run: what, where, in words.
+    pub notes: Vec<[&'a str; 3]>,
     /// Tables of an audit or a recovery, where there are any.
     pub extras: &'a [ExtraTable],
+}
+
+impl<'a> ReportInput<'a> {
+    /// From what the tables are made from.
+    #[must_use]
+    pub fn of(view: RunView<'a>, notes: &'a [Note], extras: &'a [ExtraTable]) -> Self {
+        Self {
+            campaign: view.campaign,
+            epochs: view.epochs,
+            lists: view.lists,
+            solution: view.solution,
+            notes: notes
+                .iter()
+                .map(|n| [n.what, n.place.as_str(), n.text.as_str()])
+                .collect(),
+            extras,
+        }
+    }
 }
 
 /// A table shown as it stands, and drawn where its columns are known.
