@@ -166,7 +166,9 @@ struct RivalRow<'a> {
     ln_odds: f64,
     change: &'a str,
     /// Clauses that name what is on the page: what (0 takes, 1 shares, 2 drops, 3 vanishes),
-    /// track, detection (place in its epoch on the page), epoch, loser; -1 for none.
+    /// track (-1 for a star
+    /// that only the rival has), detection (place in its epoch on the page), epoch, loser; -1
+    /// for none.
     drawn: Vec<[i64; 5]>,
 }
 
@@ -703,14 +705,15 @@ impl<'a> ChangeReader<'a> {
             } => {
                 let (k, e) = detection(&d)?;
                 let loser = from.and_then(|f| track(&f)).unwrap_or(-1);
-                [0, track(&name)?, k, e, loser]
+                // A star that exists only in the rival has no track here.
+                [0, track(&name).unwrap_or(-1), k, e, loser]
             }
             Change::Shares {
                 track: name,
                 detection: d,
             } => {
                 let (k, e) = detection(&d)?;
-                [1, track(&name)?, k, e, -1]
+                [1, track(&name).unwrap_or(-1), k, e, -1]
             }
             Change::Drops {
                 track: name,

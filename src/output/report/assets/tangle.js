@@ -65,7 +65,7 @@ function tanglePage(run, main, tangle) {
   const panels = [explanationPanel(run, tangle, null, base)];
   for (const rival of shownRivals) panels.push(explanationPanel(run, tangle, rival, base));
   put(main, h("h2", {}, "Explanations side by side"),
-    h("p", { class: "quiet" }, "Each panel: the group on the sky, and below it the coordinate that separates the stars best, against time. Lines join a detection to the place its track predicts. Outlined detections change hands."),
+    h("p", { class: "quiet" }, "Each panel: the group on the sky, and below it the coordinate that separates the stars best, against time. Lines join a detection to the place its track predicts. Outlined detections change hands; a cross is held by nobody, a square by a star that only the rival has."),
     h("div", { class: "panels", tabindex: "0", role: "region", "aria-label": "Explanations side by side" }, panels));
   if (!tangle.rivals.length) put(main, h("p", { class: "quiet" }, "No rival explanation was kept."));
   else {
@@ -100,12 +100,15 @@ function changedOwners(run, base, rival) {
   const owners = new Map(Array.from(base, ([d, list]) => [d, list.slice()]));
   const changed = new Set();
   const gone = new Set();
+  const fresh = new Set();
   for (const [what, track, place, epoch, from] of rival.drawn) {
     if (what === VANISHES) { gone.add(track); continue; }
     const d = run.epochStart[epoch] + place;
     let list = owners.get(d) || [];
-    if (what === TAKES) list = list.filter((k) => (from < 0 ? false : k !== from)).concat(track);
-    if (what === SHARES) list = list.concat(track);
+    const added = track < 0 ? [] : [track];
+    if (track < 0) fresh.add(d);
+    if (what === TAKES) list = list.filter((k) => from >= 0 && k !== from).concat(added);
+    if (what === SHARES) list = list.concat(added);
     if (what === DROPS) list = list.filter((k) => k !== track);
     owners.set(d, list);
     changed.add(d);
@@ -115,19 +118,19 @@ function changedOwners(run, base, rival) {
     owners.set(d, list.filter((k) => !gone.has(k)));
     changed.add(d);
   }
-  return { owners, changed, gone };
+  return { owners, changed, gone, fresh };
 }
 
 function explanationPanel(run, tangle, rival, base) {
-  const { owners, changed, gone } = rival ? changedOwners(run, base, rival)
-    : { owners: base, changed: changedByAny(run, tangle, base), gone: new Set() };
+  const state = rival ? changedOwners(run, base, rival)
+    : { owners: base, changed: changedByAny(run, tangle, base), gone: new Set(), fresh: new Set() };
   const tracks = focusTracks(run, tangle, rival);
   const words = rival && !rival.drawn.length ? h("p", {}, rival.change) : null;
   return h("section", { class: "panel" + (rival ? "" : " best") },
     h("h3", {}, rival ? `Rival ${rival.rank}` : "Chosen"),
     h("p", {}, rival ? `ln odds ${fixed(rival.ln_odds, 2)}, about ${oddsText(rival.ln_odds)}` : "The explanation in the tables"),
-    groupChart(run, tracks, owners, changed, gone, true),
-    groupChart(run, tracks, owners, changed, gone, false),
+    groupChart(run, tracks, state, true),
+    groupChart(run, tracks, state, false),
     words, rival && rival.drawn.length ? h("p", {}, rival.change) : null);
 }
 
@@ -143,14 +146,14 @@ function focusTracks(run, tangle, rival) {
   const touched = new Set();
   for (const r of rival ? [rival] : tangle.rivals.slice(0, 11)) {
     for (const [, track, , , from] of r.drawn) {
-      touched.add(track);
+      if (track >= 0) touched.add(track);
       if (from >= 0) touched.add(from);
     }
   }
   return touched.size ? Array.from(touched).slice(0, 8) : tangle.tracks.slice(0, 8);
 }
 
-function groupChart(run, tracks, owners, changed, gone, onSky) {
+function groupChart(run, tracks, { owners, changed, gone, fresh }, onSky) {
   const T = run.T;
   const t0 = Math.min(...tracks.map((k) => T.first_yr[k]));
   const t1 = Math.max(...tracks.map((k) => T.last_yr[k]));
@@ -187,8 +190,8 @@ function groupChart(run, tracks, owners, changed, gone, onSky) {
     g.append(text);
     f.area.append(g);
   });
-  for (const q of points.filter((p) => !p.mine.length)) {
-    const g = mark("free", f.px(q.p[0]), f.py(q.p[1]));
+  for (const q of points.filter((p) => !p.mine.length || fresh.has(p.d))) {
+    const g = mark(fresh.has(q.d) ? "rival" : "free", f.px(q.p[0]), f.py(q.p[1]));
     g.append(tipOf(run, q.d));
     f.area.append(g);
   }
