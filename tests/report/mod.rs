@@ -25,7 +25,7 @@ fn view(m: &Made) -> RunView<'_> {
 }
 
 fn input<'a>(m: &'a Made, extras: &'a [ExtraTable]) -> ReportInput<'a> {
-    ReportInput::of(view(m), &m.solution.notes, extras)
+    ReportInput::of(view(m), extras)
 }
 
 fn page(m: &Made, scope: &Scope, budget: Budget) -> String {

@@ -60,17 +60,12 @@ pub fn run(args: &Args, printer: &Printer) -> anyhow::Result<Exit> {
         &args.run.join("recover"),
         RECOVERY,
     )?);
+    extras.push(notes(&run));
     let input = ReportInput {
         campaign: &run.campaign,
         epochs: &run.epochs,
         lists: &run.lists,
         solution: &run.solution,
-        notes: run
-            .info
-            .notes
-            .iter()
-            .map(|n| [n.what.as_str(), n.place.as_str(), n.text.as_str()])
-            .collect(),
         extras: &extras,
     };
     progress.stage("drawing", None);
@@ -129,6 +124,18 @@ fn scope(args: &Args, run: &Run) -> anyhow::Result<Scope> {
         return Ok(Scope::Region([x0, y0, x1, y1]));
     }
     Ok(Scope::Whole)
+}
+
+/// The notes of the run, as a table.
+fn notes(run: &Run) -> ExtraTable {
+    let notes = run.info.notes.iter();
+    ExtraTable {
+        name: "notes".to_owned(),
+        columns: ["what", "place", "text"].map(str::to_owned).to_vec(),
+        rows: notes
+            .map(|n| vec![n.what.clone(), n.place.clone(), n.text.clone()])
+            .collect(),
+    }
 }
 
 /// A directory that was asked for must hold something; the default may be missing.

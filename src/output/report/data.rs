@@ -211,7 +211,7 @@ pub(super) fn build<'a>(
         paths,
         orbits,
         tangles,
-        notes: input.notes.clone(),
+        notes: notes(input),
         extras: input.extras,
         columns: columns.specs.clone(),
     };
@@ -311,6 +311,21 @@ fn members(input: &ReportInput, selection: &Selection, quantum: f64, columns: &m
     ] {
         columns.push(name, values, delta);
     }
+}
+
+/// Findings that did not stop the run: what, where, in words.
+fn notes<'a>(input: &ReportInput<'a>) -> Vec<[&'a str; 3]> {
+    let fresh = input.solution.notes.iter();
+    let read_back = input.extras.iter().filter(|t| t.name == "notes");
+    fresh
+        .map(|n| [n.what, n.place.as_str(), n.text.as_str()])
+        .chain(read_back.flat_map(|t| &t.rows).filter_map(|row| {
+            let [what, place, text] = &row[..] else {
+                return None;
+            };
+            Some([what.as_str(), place.as_str(), text.as_str()])
+        }))
+        .collect()
 }
 
 /// For each epoch and row: its place among the rows of that epoch on the page.

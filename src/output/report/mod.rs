@@ -15,7 +15,6 @@ mod select;
 use crate::io::result_tables::RunView;
 use crate::model::campaign::Campaign;
 use crate::model::detection::{FieldEpoch, RawList};
-use crate::model::note::Note;
 use crate::model::result::Solution;
 
 pub use extras::{AUDIT, RECOVERY, read_extras};
@@ -24,7 +23,7 @@ pub use page::{ReportError, html};
 pub use select::{Budget, Scope};
 
 /// What a report is made from.
-#[derive(Clone, Debug)]
+#[derive(Clone, Copy, Debug)]
 pub struct ReportInput<'a> {
     pub campaign: &'a Campaign,
     /// One per epoch of the campaign, in its order.
@@ -32,25 +31,20 @@ pub struct ReportInput<'a> {
     /// The lists as read, for their identifiers; one per epoch.
     pub lists: &'a [RawList],
     pub solution: &'a Solution,
-    /// Findings that did not stop the run: what, where, in words.
-    pub notes: Vec<[&'a str; 3]>,
-    /// Tables of an audit or a recovery, where there are any.
+    /// Tables of an audit or a recovery, where there are any; and the notes of a result that
+    /// was read back, as a table `notes` (what, place, text).
     pub extras: &'a [ExtraTable],
 }
 
 impl<'a> ReportInput<'a> {
     /// From what the tables are made from.
     #[must_use]
-    pub fn of(view: RunView<'a>, notes: &'a [Note], extras: &'a [ExtraTable]) -> Self {
+    pub fn of(view: RunView<'a>, extras: &'a [ExtraTable]) -> Self {
         Self {
             campaign: view.campaign,
             epochs: view.epochs,
             lists: view.lists,
             solution: view.solution,
-            notes: notes
-                .iter()
-                .map(|n| [n.what, n.place.as_str(), n.text.as_str()])
-                .collect(),
             extras,
         }
     }
@@ -59,7 +53,7 @@ impl<'a> ReportInput<'a> {
 /// A table shown as it stands, and drawn where its columns are known.
 #[derive(Clone, Debug, Default, serde::Serialize)]
 pub struct ExtraTable {
-    /// File name without suffix: `verdicts`, `evidence`, `injected`, `completeness`.
+    /// File name without suffix: `verdicts`, `evidence`, `injected`, `completeness`; or `notes`.
     pub name: String,
     pub columns: Vec<String>,
     pub rows: Vec<Vec<String>>,
