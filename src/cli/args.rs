@@ -48,6 +48,8 @@ pub enum Command {
     List(commands::list::Args),
     /// Draw a result again, or a part of it.
     Report(commands::report::Args),
+    /// Say why a track or a detection came out as it did, and how to rule otherwise.
+    Explain(commands::explain::Args),
     /// Print completions for a shell.
     #[command(hide = true)]
     Completions(commands::shell::Args),

@@ -62,6 +62,7 @@ pub fn run() -> Exit {
 fn dispatch(command: Command, printer: &Printer) -> anyhow::Result<Exit> {
     match command {
         Command::Check(a) => commands::check::run(&a, printer),
+        Command::Explain(a) => commands::explain::run(&a, printer),
         Command::List(a) => commands::list::run(&a, printer),
         Command::Report(a) => commands::report::run(&a, printer),
         Command::Completions(a) => commands::shell::completions(&a, printer),

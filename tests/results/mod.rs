@@ -1,7 +1,7 @@
 //! A result written to a directory and read back.
 
 mod rulings;
-mod sample;
+pub mod sample;
 
 use std::fs;
 use std::path::Path;
@@ -15,7 +15,7 @@ use asterskein::io::{ecsv_read, ecsv_write};
 
 use sample::Sample;
 
-fn write(sample: &Sample, out: &Path) {
+pub fn write(sample: &Sample, out: &Path) {
     let view = sample.view();
     let dir = RunDir::begin(out, Existing::Refuse).expect("a free directory");
     write_run::write_tables(&dir, view, &[]).expect("tables");

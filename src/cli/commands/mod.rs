@@ -1,6 +1,7 @@
 //! One file per command.
 
 pub mod check;
+pub mod explain;
 pub mod list;
 pub mod report;
 pub mod shell;

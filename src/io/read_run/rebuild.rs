@@ -53,12 +53,13 @@ pub fn rebuild(
     let index: Vec<IdIndex<'_>> = lists.iter().map(|l| IdIndex::of(&l.ids)).collect();
     let members = Detections::read(&tables.members, &index)?;
     let leftovers = Detections::read(&tables.leftovers, &index)?;
-    let epochs = field_epochs(campaign, lists, regions, [&members, &leftovers])?;
+    let reports = read_epochs(&tables.epochs)?;
+    let epochs = field_epochs(campaign, lists, regions, &reports, [&members, &leftovers])?;
     let solution = Solution {
         tracks: read_tracks(&tables.tracks, t_ref_yr, tables.orbits.is_some())?,
         members: read_members(&tables.members, &members, &names)?,
         leftovers: read_leftovers(&tables.leftovers, &leftovers, &names)?,
-        epochs: read_epochs(&tables.epochs)?,
+        epochs: reports,
         tangles: read_tangles(&tables.tangles, &names)?,
         rivals: read_rivals(&tables.rivals)?,
         orbits,
@@ -433,6 +434,7 @@ fn field_epochs(
     campaign: &Campaign,
     lists: &[RawList],
     regions: &[SavedRegion],
+    reports: &[EpochReport],
     from: [&Detections; 2],
 ) -> Result<Vec<FieldEpoch>, Misfit> {
     let mut epochs: Vec<FieldEpoch> = campaign
@@ -468,9 +470,19 @@ fn field_epochs(
             into.mag_err[r] = d.mag_err[k];
         }
     }
-    for (epoch, e) in campaign.epochs.iter().zip(&epochs) {
+    for (k, epoch) in campaign.epochs.iter().enumerate() {
+        let e = &mut epochs[k];
         let lost = e.x_mas.iter().filter(|x| x.is_nan()).count();
-        if lost > 0 {
+        if reports.get(k).is_some_and(|r| r.failed.is_some()) && lost == e.len() {
+            // Not placed: it has no rows in the common frame.
+            for column in [&mut e.x_mas, &mut e.y_mas, &mut e.mag, &mut e.mag_err] {
+                column.clear();
+            }
+            for column in [&mut e.rv_km_s, &mut e.rv_err_km_s, &mut e.quality] {
+                column.clear();
+            }
+            e.cov_mas2.clear();
+        } else if lost > 0 {
             return Err(misfit(
                 "members",
                 format!(
