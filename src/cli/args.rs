@@ -44,6 +44,8 @@ pub struct Global {
 pub enum Command {
     /// Look at the lists of a campaign and name what is odd; writes nothing.
     Check(commands::check::Args),
+    /// Link the detections of a campaign into tracks (the main job).
+    Link(commands::link::Args),
     /// Print a table of a result, or some rows and columns of it.
     List(commands::list::Args),
     /// Draw a result again, or a part of it.

@@ -46,7 +46,7 @@ pub fn run() -> Exit {
         printer.error(&e);
         return Exit::Failed;
     }
-    match dispatch(cli.command, &printer) {
+    match dispatch(cli.command, &printer, cli.global.threads) {
         Ok(exit) => exit,
         Err(e) => {
             printer.error(&e);
@@ -59,10 +59,11 @@ pub fn run() -> Exit {
     }
 }
 
-fn dispatch(command: Command, printer: &Printer) -> anyhow::Result<Exit> {
+fn dispatch(command: Command, printer: &Printer, threads: usize) -> anyhow::Result<Exit> {
     match command {
         Command::Check(a) => commands::check::run(&a, printer),
         Command::Explain(a) => commands::explain::run(&a, printer),
+        Command::Link(a) => commands::link::run(&a, printer, threads),
         Command::List(a) => commands::list::run(&a, printer),
         Command::Report(a) => commands::report::run(&a, printer),
         Command::Completions(a) => commands::shell::completions(&a, printer),

@@ -8,6 +8,7 @@ use super::result_tables::{self, RunView};
 use super::run_dir::{OutputError, RunDir};
 use super::run_info::{self, Input, RunInfo, SavedNote, SavedRegion, Timing};
 use super::table::Table;
+use crate::model::campaign::Campaign;
 use crate::model::note::Note;
 
 /// What `run.json` needs beside the result itself.
@@ -104,13 +105,12 @@ pub fn write_info(
 /// # Errors
 /// A file cannot be read.
 pub fn inputs_of(
-    view: RunView<'_>,
+    campaign: &Campaign,
     further: &[(&'static str, PathBuf)],
 ) -> Result<Vec<Input>, OutputError> {
-    let mut files = run_info::input_files(view.campaign);
+    let mut files = run_info::input_files(campaign);
     files.extend_from_slice(further);
-    let folder = view
-        .campaign
+    let folder = campaign
         .path
         .parent()
         .map(PathBuf::from)

@@ -21,6 +21,7 @@ use crate::io::table::Table;
 use crate::model::campaign::ListSource;
 use crate::model::change::Change;
 use crate::model::result::Solution;
+use crate::model::ruling::{Decision, Ruling};
 use crate::near::Tree;
 
 /// A detection of a list reduced anew lies within this part of the fwhm of its old place.
@@ -70,7 +71,7 @@ pub struct Renamed {
 }
 
 /// The names of an earlier run and the detections that carry them.
-#[derive(Debug)]
+#[derive(Debug, Default)]
 pub struct OldNames {
     tracks: Vec<String>,
     epochs: Vec<OldEpoch>,
@@ -470,6 +471,27 @@ fn next_number(last: &mut u64, taken: impl Fn(&str) -> bool) -> String {
             return name;
         }
     }
+}
+
+/// Names that rulings give, by track.
+#[must_use]
+pub fn ruled_names(solution: &Solution, rulings: &[Ruling]) -> Vec<Option<String>> {
+    let mut names = vec![None; solution.tracks.len()];
+    for ruling in rulings {
+        let Decision::Name(at, name) = &ruling.decision else {
+            continue;
+        };
+        // A merged detection names the star that gives most of its light.
+        let holder = solution
+            .members
+            .iter()
+            .filter(|m| (m.epoch, m.row) == (at.epoch, at.row))
+            .max_by(|a, b| a.share.total_cmp(&b.share).then(b.track.cmp(&a.track)));
+        if let Some(m) = holder {
+            names[m.track] = Some(name.clone());
+        }
+    }
+    names
 }
 
 /// Puts new names into a solution: its tracks, and the wording of its rivals.

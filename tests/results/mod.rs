@@ -20,7 +20,7 @@ pub fn write(sample: &Sample, out: &Path) {
     let dir = RunDir::begin(out, Existing::Refuse).expect("a free directory");
     write_run::write_tables(&dir, view, &[]).expect("tables");
     let record = RunRecord {
-        inputs: write_run::inputs_of(view, &[]).expect("digests"),
+        inputs: write_run::inputs_of(&sample.campaign, &[]).expect("digests"),
         settings: serde_json::json!({"seed": 1}),
         notes: Vec::new(),
         last_number: 3,

@@ -2,6 +2,7 @@
 
 pub mod check;
 pub mod explain;
+pub mod link;
 pub mod list;
 pub mod report;
 pub mod shell;
