@@ -7,6 +7,7 @@ pub mod kepler;
 pub mod linear;
 pub mod orbit_columns;
 pub mod orbit_fit;
+pub mod refine_mass;
 pub mod start;
 pub mod state;
 pub mod state_fit;

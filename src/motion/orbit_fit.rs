@@ -59,6 +59,17 @@ impl OrbitPrior {
             v_sigma_mas_yr: [sigma; 3],
         }
     }
+
+    /// (index, 1 / variance) of the state values that have a prior.
+    pub(super) fn precision(&self) -> [(usize, f64); 4] {
+        let of = |s: f64| 1.0 / (s * s);
+        [
+            (2, of(self.z_sigma_mas)),
+            (3, of(self.v_sigma_mas_yr[0])),
+            (4, of(self.v_sigma_mas_yr[1])),
+            (5, of(self.v_sigma_mas_yr[2])),
+        ]
+    }
 }
 
 /// Law of the errors of positions, per two-dimensional residual.
@@ -79,7 +90,7 @@ pub enum ErrorLaw {
 impl ErrorLaw {
     /// -2 ln(density * 2 pi sqrt(det C)) of a squared Mahalanobis distance, and its slope.
     #[inline]
-    fn cost(self, chi2: f64) -> (f64, f64) {
+    pub(super) fn cost(self, chi2: f64) -> (f64, f64) {
         match self {
             Self::Gaussian => (chi2, 1.0),
             Self::CoreWing { wing, widen } => {
@@ -174,6 +185,11 @@ impl OrbitProblem<'_> {
             let trial = state - factor.solve(&here.slope);
             let there = self.local(&trial);
             let gain = here.objective - there.objective;
+            if gain.abs() < SMALL_GAIN && damping < 1.0 && gain < 0.0 {
+                // Rounding decides: the minimum is reached.
+                end = FitEnd::Converged;
+                break;
+            }
             if gain >= 0.0 {
                 state = trial;
                 here = there;
@@ -258,7 +274,7 @@ impl OrbitProblem<'_> {
                 }
             }
         }
-        for (i, precision) in self.prior_precision() {
+        for (i, precision) in self.prior.precision() {
             objective += precision * state[i] * state[i];
             slope[i] += precision * state[i];
             curvature[(i, i)] += precision;
@@ -275,18 +291,6 @@ impl OrbitProblem<'_> {
         }
     }
 
-    /// (index, 1 / variance) of the state values that have a prior.
-    fn prior_precision(&self) -> [(usize, f64); 4] {
-        let p = &self.prior;
-        let of = |s: f64| 1.0 / (s * s);
-        [
-            (2, of(p.z_sigma_mas)),
-            (3, of(p.v_sigma_mas_yr[0])),
-            (4, of(p.v_sigma_mas_yr[1])),
-            (5, of(p.v_sigma_mas_yr[2])),
-        ]
-    }
-
     fn finish(&self, state: State, here: &Local, steps: u32, end: FitEnd) -> Option<OrbitFit> {
         let factor = here.curvature.cholesky()?;
         let cov = factor.inverse();
@@ -300,7 +304,7 @@ impl OrbitProblem<'_> {
         for o in self.observed.velocities {
             ln_norm -= 0.5 * ln_turn + o.err_mas_yr.ln();
         }
-        for (_, precision) in self.prior_precision() {
+        for (_, precision) in self.prior.precision() {
             ln_norm += 0.5 * (precision.ln() - ln_turn);
         }
         let mut ln_evidence = ln_norm - 0.5 * here.objective + 3.0 * ln_turn - 0.5 * ln_det;

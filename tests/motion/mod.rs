@@ -1,6 +1,7 @@
 //! Propagation, fits and elements against published values, high-precision cases and properties.
 
 mod elements;
+mod mass;
 mod propagation;
 mod reference;
 mod starts;
