@@ -46,6 +46,8 @@ pub enum Command {
     Check(commands::check::Args),
     /// Link the detections of a campaign into tracks (the main job).
     Link(commands::link::Args),
+    /// Write observations, start orbits and conventions of chosen tracks for an orbit fitter.
+    Handoff(commands::handoff::Args),
     /// Print a table of a result, or some rows and columns of it.
     List(commands::list::Args),
     /// Draw a result again, or a part of it.

@@ -64,6 +64,7 @@ fn dispatch(command: Command, printer: &Printer, threads: usize) -> anyhow::Resu
         Command::Check(a) => commands::check::run(&a, printer),
         Command::Explain(a) => commands::explain::run(&a, printer),
         Command::Link(a) => commands::link::run(&a, printer, threads),
+        Command::Handoff(a) => commands::handoff::run(&a, printer),
         Command::List(a) => commands::list::run(&a, printer),
         Command::Report(a) => commands::report::run(&a, printer),
         Command::Completions(a) => commands::shell::completions(&a, printer),

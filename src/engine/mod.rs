@@ -1,6 +1,7 @@
 //! The order of stages, and everything that runs in parallel.
 
 pub mod observer;
+pub mod orbits;
 pub mod pipeline;
 pub mod prepare;
 pub mod rounds;

@@ -4,7 +4,7 @@ use rayon::prelude::*;
 
 use super::observer::Observer;
 use super::settings::Settings;
-use super::{prepare, rounds};
+use super::{orbits, prepare, rounds};
 use crate::maths::lnprob::logistic;
 use crate::model::campaign::Campaign;
 use crate::model::detection::FieldEpoch;
@@ -48,7 +48,9 @@ pub fn link(
     Ok(pool.install(|| {
         let mut scene = prepare::scene(campaign, epochs);
         let work = rounds::run(&mut scene, observer);
-        conclude(campaign, epochs, &scene, work, observer)
+        let mut solution = conclude(campaign, epochs, &scene, work, observer);
+        orbits::conclude(campaign, epochs, settings, &mut solution, observer);
+        solution
     }))
 }
 

@@ -2,5 +2,6 @@
 
 pub mod assemble;
 pub mod flags;
+pub mod orbits;
 pub mod proof;
 pub mod summary;

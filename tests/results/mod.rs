@@ -1,5 +1,6 @@
 //! A result written to a directory and read back.
 
+mod handoff;
 mod rulings;
 pub mod sample;
 

@@ -1,11 +1,13 @@
 //! `list`: a table of a result, or some rows and columns of it, lined up for reading.
 
+use std::cmp::Ordering;
 use std::path::PathBuf;
 
 use anyhow::Context;
 use asterskein::io::number_text::{push_float, push_int};
 use asterskein::io::read_run;
-use asterskein::io::table::{Precision, Table, Values};
+use asterskein::io::result_tables::ELEMENTS;
+use asterskein::io::table::{Column, Precision, Table, Values};
 use asterskein::model::flag;
 use serde_json::{Map, Value};
 
@@ -29,6 +31,13 @@ pub struct Args {
     /// Only rows that bear one of these flags.
     #[arg(long, value_delimiter = ',', value_name = "FLAGS")]
     pub flag: Vec<String>,
+    /// Sort by a column, smallest first (speeds and probabilities: largest first); its unit may
+    /// be left out, as in `--by pericentre_speed`. Rows without a value come last.
+    #[arg(long, value_name = "COLUMN")]
+    pub by: Option<String>,
+    /// Sort the other way round.
+    #[arg(long, requires = "by")]
+    pub reverse: bool,
     /// Only the first rows.
     #[arg(long, value_name = "N")]
     pub limit: Option<usize>,
@@ -147,7 +156,7 @@ pub fn run(args: &Args, printer: &Printer) -> anyhow::Result<Exit> {
 
 fn chosen_columns(args: &Args, table: &Table<'_>) -> anyhow::Result<Vec<usize>> {
     let all = || (0..table.columns.len()).collect();
-    let usual: Vec<String> = args.table.usual().iter().map(|s| (*s).to_owned()).collect();
+    let usual = usual_columns(args, table);
     let names = if args.columns.is_empty() {
         &usual
     } else {
@@ -158,19 +167,48 @@ fn chosen_columns(args: &Args, table: &Table<'_>) -> anyhow::Result<Vec<usize>> 
     }
     names
         .iter()
-        .map(|name| {
-            let at = table.columns.iter().position(|c| c.name == *name);
-            at.ok_or_else(|| {
-                let known: Vec<&str> = table.columns.iter().map(|c| c.name.as_str()).collect();
-                UsageError(format!(
-                    "table `{}` has no column `{name}`; it has {}",
-                    args.table.file(),
-                    known.join(", ")
-                ))
-                .into()
-            })
-        })
+        .map(|name| column_called(table, name).ok_or_else(|| no_column(args, table, name).into()))
         .collect()
+}
+
+/// Columns shown unless others are asked for: the one sorted by is always among them.
+fn usual_columns(args: &Args, table: &Table<'_>) -> Vec<String> {
+    // Tracks sorted by a property of their orbits are wanted for their orbits.
+    const ORBITS: [&str; 12] = [
+        "track",
+        "n_members",
+        "semi_major_mas",
+        "period_yr",
+        "eccentricity",
+        "inclination_deg",
+        "t_pericentre_yr",
+        "pericentre_au",
+        "pericentre_speed_km_s",
+        "pericentre_speed_err_km_s",
+        "probability",
+        "flags",
+    ];
+    let by = args.by.as_ref().and_then(|by| column_called(table, by));
+    let by = by.map(|c| table.columns[c].name.as_str());
+    let by_orbit = by.is_some_and(|n| ELEMENTS.iter().any(|e| e.0 == n));
+    let mut usual = args.table.usual();
+    if by_orbit && args.table == Which::Tracks {
+        usual = &ORBITS;
+    }
+    let mut names: Vec<String> = usual.iter().map(|s| (*s).to_owned()).collect();
+    if let Some(by) = by.filter(|by| !names.is_empty() && !names.iter().any(|n| n == by)) {
+        names.push(by.to_owned());
+    }
+    names
+}
+
+fn no_column(args: &Args, table: &Table<'_>, name: &str) -> UsageError {
+    let known: Vec<&str> = table.columns.iter().map(|c| c.name.as_str()).collect();
+    UsageError(format!(
+        "table `{}` has no column `{name}`; it has {}",
+        args.table.file(),
+        known.join(", ")
+    ))
 }
 
 fn chosen_rows(args: &Args, table: &Table<'_>) -> anyhow::Result<Vec<usize>> {
@@ -210,8 +248,58 @@ fn chosen_rows(args: &Args, table: &Table<'_>) -> anyhow::Result<Vec<usize>> {
                 .any(|f| args.flag.iter().any(|w| w == f))
         });
     }
+    if let Some(by) = &args.by {
+        let at = column_called(table, by).ok_or_else(|| no_column(args, table, by))?;
+        sort_rows(&mut rows, &table.columns[at], args.reverse);
+    }
     rows.truncate(args.limit.unwrap_or(usize::MAX));
     Ok(rows)
+}
+
+/// A column by its name, or by its name without the unit.
+fn column_called(table: &Table<'_>, name: &str) -> Option<usize> {
+    const UNITS: [&str; 8] = [
+        "_mas", "_mas_yr", "_mas_yr2", "_yr", "_deg", "_au", "_km_s", "_nats",
+    ];
+    let is = |wanted: &str| table.columns.iter().position(|c| c.name == wanted);
+    is(name).or_else(|| UNITS.iter().find_map(|unit| is(&format!("{name}{unit}"))))
+}
+
+/// Sorts rows by a column; those without a value come last either way, ties stay in table order.
+fn sort_rows(rows: &mut [usize], column: &Column<'_>, reverse: bool) {
+    let largest_first = ["speed", "probability", "ln_evidence", "n_members"]
+        .iter()
+        .any(|w| column.name.contains(w));
+    let flip = |order: Ordering| {
+        if largest_first != reverse {
+            order.reverse()
+        } else {
+            order
+        }
+    };
+    let numbers = |at: &dyn Fn(usize) -> f64, rows: &mut [usize]| {
+        rows.sort_by(|&a, &b| {
+            let (a, b) = (at(a), at(b));
+            match (a.is_nan(), b.is_nan()) {
+                (false, false) => flip(a.total_cmp(&b)),
+                (a_none, b_none) => a_none.cmp(&b_none),
+            }
+        });
+    };
+    match &column.values {
+        Values::Float(s, _) => numbers(&|k| s.at(k), rows),
+        Values::Int(s) => numbers(&|k| s.at(k).map_or(f64::NAN, |v| v as f64), rows),
+        Values::Bool(s) => {
+            let at = |k| s.at(k).map_or(f64::NAN, |b| f64::from(u8::from(b)));
+            numbers(&at, rows);
+        }
+        Values::Text(t) => rows.sort_by(|&a, &b| {
+            let (a, b) = (t.at(a), t.at(b));
+            a.is_empty()
+                .cmp(&b.is_empty())
+                .then_with(|| flip(a.cmp(&b)))
+        }),
+    }
 }
 
 /// One cell as a person reads it: four decimals are enough.

@@ -3,6 +3,7 @@
 pub mod check;
 pub mod explain;
 pub mod link;
+pub mod handoff;
 pub mod list;
 pub mod report;
 pub mod shell;
