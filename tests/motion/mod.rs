@@ -6,3 +6,5 @@ mod propagation;
 mod reference;
 mod starts;
 mod terms;
+#[path = "../outside/visual_binaries.rs"]
+mod visual_binaries;
