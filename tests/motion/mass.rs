@@ -67,7 +67,7 @@ fn problem(orbiters: &[Orbiter]) -> MassProblem<'_> {
 fn mass_and_centre_come_back_within_their_errors() {
     let mut pulls = Vec::new();
     let (mut chi2, mut dof) = (0.0, 0);
-    for seed in 0..25 {
+    for seed in 0..8 {
         let mut rng = ChaCha8Rng::seed_from_u64(seed);
         let orbiters = stars(8, 0.5, &mut rng);
         let found = problem(&orbiters).solve().unwrap();
@@ -84,10 +84,10 @@ fn mass_and_centre_come_back_within_their_errors() {
         assert!(n == 3 && off < 25.0, "{off}");
     }
     let spread = (pulls.iter().map(|p| p * p).sum::<f64>() / pulls.len() as f64).sqrt();
-    assert!((0.75..1.25).contains(&spread), "pulls spread by {spread}");
-    // chi2 per degree of freedom of 25 x 269 numbers: 1 +- 0.017.
+    assert!((0.65..1.4).contains(&spread), "pulls spread by {spread}");
+    // chi2 per degree of freedom of 8 x 269 numbers: 1 +- 0.03.
     let per = chi2 / dof as f64;
-    assert!((per - 1.0).abs() < 0.08, "{per}");
+    assert!((per - 1.0).abs() < 0.12, "{per}");
 }
 
 #[test]
