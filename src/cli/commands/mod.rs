@@ -2,8 +2,8 @@
 
 pub mod check;
 pub mod explain;
-pub mod link;
 pub mod handoff;
+pub mod link;
 pub mod list;
 pub mod report;
 pub mod shell;
