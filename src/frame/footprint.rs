@@ -6,6 +6,7 @@
 //! at the edge that moves a little is still inside. With too few points to say, there is no
 //! outline and every place counts as inside.
 
+use crate::maths::hull::{area, convex_hull};
 use crate::model::region::Region;
 
 /// Directions in which the hull is pushed outward.
@@ -43,11 +44,7 @@ pub fn grown_hull(x_mas: &[f64], y_mas: &[f64], fwhm_mas: f64) -> Option<Vec<[f6
     let points: Vec<[f64; 2]> = x_mas.iter().zip(y_mas).map(|(&x, &y)| [x, y]).collect();
     let n = points.len();
     let hull = convex_hull(points);
-    let area = Region {
-        outline_mas: hull.clone(),
-        holes_mas: Vec::new(),
-    }
-    .area_mas2()?;
+    let area = area(&hull);
     let extent = hull
         .iter()
         .flat_map(|a| hull.iter().map(move |b| (a[0] - b[0]).hypot(a[1] - b[1])))
@@ -78,39 +75,6 @@ fn pushed_out(hull: &[[f64; 2]], grow: f64) -> Vec<[f64; 2]> {
     convex_hull(around)
 }
 
-/// Corners of the convex hull, counter-clockwise (Andrew 1979, monotone chain).
-#[must_use]
-pub fn convex_hull(mut points: Vec<[f64; 2]>) -> Vec<[f64; 2]> {
-    points.sort_by(|a, b| a[0].total_cmp(&b[0]).then(a[1].total_cmp(&b[1])));
-    points.dedup();
-    if points.len() < 3 {
-        return points;
-    }
-    let mut chain: Vec<[f64; 2]> = Vec::new();
-    for pass in 0..2 {
-        let base = chain.len();
-        for &p in &points {
-            while chain.len() >= base + 2
-                && turn(chain[chain.len() - 2], chain[chain.len() - 1], p) <= 0.0
-            {
-                chain.pop();
-            }
-            chain.push(p);
-        }
-        // The last point of a pass is the first of the next.
-        chain.pop();
-        if pass == 0 {
-            points.reverse();
-        }
-    }
-    chain
-}
-
-/// Twice the signed area of the triangle; positive for a left turn.
-fn turn(a: [f64; 2], b: [f64; 2], c: [f64; 2]) -> f64 {
-    (b[0] - a[0]) * (c[1] - a[1]) - (b[1] - a[1]) * (c[0] - a[0])
-}
-
 #[cfg(test)]
 mod tests {
     use super::*;
@@ -119,17 +83,6 @@ mod tests {
         (0..side * side)
             .map(|k| ((k % side) as f64 * step, (k / side) as f64 * step))
             .unzip()
-    }
-
-    #[test]
-    fn hull_of_a_grid_is_its_square() {
-        let (x, y) = grid(5, 10.0);
-        let points = x.iter().zip(&y).map(|(&x, &y)| [x, y]).collect();
-        let hull = convex_hull(points);
-        assert_eq!(
-            hull,
-            vec![[0.0, 0.0], [40.0, 0.0], [40.0, 40.0], [0.0, 40.0]]
-        );
     }
 
     #[test]

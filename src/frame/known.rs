@@ -1,7 +1,7 @@
 //! Lists whose frame is known: units, nominal scale, angle and handedness, or the tangent plane.
 
 use crate::maths::cov2::Cov2;
-use crate::maths::sky::TangentPlane;
+use crate::maths::sky::{TangentPlane, plane_axes};
 use crate::maths::units::MAS_PER_DEG;
 use crate::model::campaign::{
     Campaign, Epoch, FrameFreedom, Handedness, Instrument, Selection, Unit,
@@ -165,7 +165,11 @@ impl NominalMap {
         }
         let mas = scale(s.unit)?;
         Ok(Self {
-            law: Law::Linear(linear(mas, s.angle_deg, s.handedness)),
+            law: Law::Linear(plane_axes(
+                mas,
+                s.angle_deg,
+                s.handedness == Handedness::EastLeft,
+            )),
             error_factor: error_mas / mas,
         })
     }
@@ -212,16 +216,6 @@ impl NominalMap {
     }
 }
 
-/// +y lies at position angle `angle_deg`, +x at 90 degrees more (east right) or less.
-fn linear(mas: f64, angle_deg: f64, handedness: Handedness) -> [f64; 4] {
-    let (s, c) = angle_deg.to_radians().sin_cos();
-    let flip = match handedness {
-        Handedness::EastRight => 1.0,
-        Handedness::EastLeft => -1.0,
-    };
-    [mas * flip * c, mas * s, -mas * flip * s, mas * c]
-}
-
 /// The campaign's footprint in mas.
 ///
 /// Corners are in list units; when read so they leave out most of the list (or, being mas, would
@@ -265,22 +259,5 @@ fn stated_outline(
         Some(corners.clone())
     } else {
         Some(as_list)
-    }
-}
-
-#[cfg(test)]
-mod tests {
-    use super::*;
-
-    #[test]
-    fn nominal_axes_point_where_the_format_says() {
-        // +y at 90 degrees is east; +x at 180 degrees is south.
-        let m = linear(2.0, 90.0, Handedness::EastRight);
-        let at = |u: f64, v: f64| [m[0] * u + m[1] * v, m[2] * u + m[3] * v];
-        let close = |a: [f64; 2], b: [f64; 2]| (a[0] - b[0]).hypot(a[1] - b[1]) < 1e-12;
-        assert!(close(at(0.0, 1.0), [2.0, 0.0]) && close(at(1.0, 0.0), [0.0, -2.0]));
-        // An ordinary direct image: north up, east left.
-        let m = linear(1.0, 0.0, Handedness::EastLeft);
-        assert_eq!([m[0], m[3]], [-1.0, 1.0]);
     }
 }

@@ -298,16 +298,17 @@ fn unit_factor(role: &str, unit: Option<&str>, instrument: &Instrument) -> Resul
         found: unit.to_owned(),
         expected: match quantity {
             Quantity::Place(Unit::Deg) => {
-                "an angle on the sky, since the campaign says unit = \"deg\"".to_owned()
+                "an angle on the sky, as the campaign's unit = \"deg\" says".to_owned()
             }
             Quantity::Place(u) => format!(
-                "the campaign says unit = \"{}\"; if these are right ascension and declination, say unit = \"deg\"",
+                "the campaign's unit = \"{}\" or one like it; if these are right ascension and declination, say unit = \"deg\"",
                 super::units::word(u)
             ),
-            Quantity::Length(u) => format!("the campaign says error_unit = \"{}\"", super::units::word(u)),
+            Quantity::Length(u) => format!("the campaign's error_unit = \"{}\" or one like it", super::units::word(u)),
             Quantity::Angle => "deg or rad".to_owned(),
             Quantity::Magnitude => "mag".to_owned(),
             Quantity::Speed => "km / s or m / s".to_owned(),
+            Quantity::Motion => "mas / yr".to_owned(),
             Quantity::Bare => "no unit".to_owned(),
         },
     })
@@ -316,7 +317,7 @@ fn unit_factor(role: &str, unit: Option<&str>, instrument: &Instrument) -> Resul
 /// A plan for a small table with fixed names: all of `needed`, any of `optional`.
 ///
 /// # Errors
-/// Columns that are missing, named twice, or not known.
+/// Columns that are missing or nearly named, units that do not fit.
 pub(super) fn plan_of(
     heads: &[Head],
     needed: &[&'static str],
@@ -329,20 +330,61 @@ pub(super) fn plan_of(
         wants: vec![Want::Skip; heads.len()],
         ..Plan::default()
     };
-    for &role in needed {
-        match names.iter().position(|n| n == role) {
-            Some(c) => {
-                plan.wants[c] = Want::Number;
-                plan.roles.push((role, c, 1.0));
+    let all = needed
+        .iter()
+        .map(|&role| (role, Want::Number, true))
+        .chain(optional.iter().map(|&(role, want)| (role, want, false)));
+    let mut known: Vec<&'static str> = Vec::new();
+    for (role, want, is_needed) in all {
+        known.push(role);
+        let Some(c) = names.iter().position(|n| n == role) else {
+            if is_needed {
+                missing(&mut faults, place, role, &names);
             }
-            None => missing(&mut faults, place, role, &names),
+            continue;
+        };
+        plan.wants[c] = want;
+        match named_unit_factor(role, heads[c].unit.as_deref()) {
+            Ok(f) => plan.roles.push((role, c, f)),
+            Err(kind) => faults.push(place.clone().with_column(role), kind),
         }
     }
-    for &(role, want) in optional {
-        if let Some(c) = names.iter().position(|n| n == role) {
-            plan.wants[c] = want;
-            plan.roles.push((role, c, 1.0));
+    for name in names.iter().filter(|n| !known.contains(&n.as_str())) {
+        let near = known.iter().find(|role| {
+            plan.role(role).is_none() && (squashed(role) == squashed(name) || one_slip(role, name))
+        });
+        if let Some(role) = near
+            && !needed.contains(role)
+        {
+            faults.push(
+                place.clone().with_column(name),
+                FaultKind::NearlyNamed {
+                    known: (*role).to_owned(),
+                },
+            );
         }
     }
     faults.or(plan)
+}
+
+/// Factor from the unit a file states to the unit a column of ours has in its name.
+fn named_unit_factor(role: &str, unit: Option<&str>) -> Result<f64, FaultKind> {
+    let Some(unit) = unit.map(str::trim).filter(|u| !u.is_empty()) else {
+        return Ok(1.0);
+    };
+    let (quantity, expected) = if role.ends_with("_mas_yr") {
+        (Quantity::Motion, "mas / yr")
+    } else if role.ends_with("_mas") {
+        (Quantity::Length(Unit::Mas), "mas, arcsec or deg")
+    } else if role.ends_with("_km_s") {
+        (Quantity::Speed, "km / s or m / s")
+    } else if role == "mag" {
+        (Quantity::Magnitude, "mag")
+    } else {
+        return Ok(1.0);
+    };
+    factor(unit, quantity).ok_or_else(|| FaultKind::Unit {
+        found: unit.to_owned(),
+        expected: expected.to_owned(),
+    })
 }

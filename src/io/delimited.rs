@@ -27,10 +27,59 @@ pub(super) struct Table {
     pub columns: Vec<Column>,
     pub n_rows: usize,
     pub rows: RowPlaces,
+    /// Row of the file (from 0) of each row here, when only some were taken.
+    pub taken: Option<Vec<u32>>,
+}
+
+impl Table {
+    /// Row of the file, from 0.
+    pub fn file_row(&self, row: usize) -> u32 {
+        self.taken.as_ref().map_or(row as u32, |t| t[row])
+    }
+
+    /// Place of a row of this table.
+    pub fn place(&self, path: &Path, row: usize) -> Place {
+        self.rows.place(path, self.file_row(row) as usize)
+    }
+
+    /// Numbers of a role; empty when the table has no such column.
+    pub fn numbers(&self, role: &str) -> &[f64] {
+        match self.plan.role(role).map(|(c, _)| &self.columns[c]) {
+            Some(Column::Numbers(v)) => v,
+            _ => &[],
+        }
+    }
+
+    /// A table of some rows, in the given order.
+    pub fn rows_taken(&self, rows: &[u32]) -> Self {
+        Self {
+            heads: self.heads.clone(),
+            plan: self.plan.clone(),
+            columns: self.columns.iter().map(|c| c.taken(rows)).collect(),
+            n_rows: rows.len(),
+            rows: self.rows.clone(),
+            taken: Some(rows.iter().map(|&k| self.file_row(k as usize)).collect()),
+        }
+    }
+}
+
+impl Column {
+    fn taken(&self, rows: &[u32]) -> Self {
+        fn pick<T: Clone>(values: &[T], rows: &[u32]) -> Vec<T> {
+            rows.iter().map(|&k| values[k as usize].clone()).collect()
+        }
+        match self {
+            Self::Skipped => Self::Skipped,
+            Self::Numbers(v) => Self::Numbers(pick(v, rows)),
+            Self::Texts(v) => Self::Texts(pick(v, rows)),
+            Self::Ids(Ids::Numbers(v)) => Self::Ids(Ids::Numbers(pick(v, rows))),
+            Self::Ids(Ids::Text(v)) => Self::Ids(Ids::Text(pick(v, rows))),
+        }
+    }
 }
 
 /// Where rows stand in the file.
-#[derive(Clone, Debug, PartialEq)]
+#[derive(Clone, Debug, PartialEq, Eq)]
 pub(super) enum RowPlaces {
     /// (first row, its line) of each stretch of consecutive lines, from row 0.
     Lines(Vec<(usize, usize)>),
@@ -205,6 +254,7 @@ pub(super) fn read_rows(
         columns,
         n_rows,
         rows: RowPlaces::Lines(stretches),
+        taken: None,
     })
 }
 

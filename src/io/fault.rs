@@ -245,7 +245,8 @@ impl Faults {
         Err(self)
     }
 
-    fn sort(&mut self) {
+    /// Puts the faults in the order of files and places.
+    pub fn sort(&mut self) {
         self.list.sort_by(|a, b| a.place.cmp(&b.place));
     }
 

@@ -5,6 +5,12 @@ use std::io::Read;
 use std::path::Path;
 
 use super::fault::{FaultKind, Faults, Place};
+use super::fits_read;
+use super::format_error::FormatError;
+#[cfg(feature = "parquet")]
+use super::parquet_read;
+use super::table::Table;
+use super::votable_read;
 
 /// Kinds of table.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
@@ -54,4 +60,43 @@ pub(super) fn plain<'a>(bytes: &'a [u8], path: &Path) -> Result<Cow<'a, [u8]>, F
             },
         )),
     }
+}
+
+/// Reads a binary or XML table.
+///
+/// # Errors
+/// What does not follow the format.
+pub(super) fn read(kind: Kind, bytes: &[u8], path: &Path) -> Result<Table<'static>, Faults> {
+    let (format, result) = match kind {
+        Kind::VoTable => ("VOTable", votable_read::read(bytes)),
+        Kind::Fits => ("FITS", fits_read::read(bytes)),
+        #[cfg(feature = "parquet")]
+        Kind::Parquet => ("Parquet", parquet_read::read(bytes)),
+        #[cfg(not(feature = "parquet"))]
+        Kind::Parquet => (
+            "Parquet",
+            Err(FormatError::new(
+                "a Parquet file",
+                "another format: this program was built without Parquet",
+            )),
+        ),
+        Kind::Text | Kind::Ecsv => (
+            "table",
+            Err(FormatError::new("text", "a FITS, VOTable or Parquet file")),
+        ),
+    };
+    result.map_err(|e| {
+        Faults::one(
+            Place {
+                line: e.line,
+                row: e.row,
+                column: e.column.clone(),
+                ..Place::file(path)
+            },
+            FaultKind::Format {
+                format: format.to_owned(),
+                reason: format!("found {}, expected {}", e.found, e.expected),
+            },
+        )
+    })
 }

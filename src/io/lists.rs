@@ -8,13 +8,15 @@ use std::path::Path;
 use rayon::prelude::*;
 
 use super::columns;
-use super::delimited::{self, Table};
+use super::delimited::{self, Planner, Table};
 use super::ecsv_list;
 use super::fault::{FaultKind, Faults, Place};
 use super::files::{self, Disk, Files};
 use super::kind::{self, Kind};
+use super::one_table;
+use super::planned;
 use super::raw_list;
-use crate::model::campaign::{Campaign, Epoch, ListSource};
+use crate::model::campaign::{Campaign, Epoch, Instrument, ListSource};
 use crate::model::detection::RawList;
 use crate::model::note::Note;
 
@@ -34,26 +36,50 @@ pub fn read_lists_from(
     files: &dyn Files,
     campaign: &Campaign,
 ) -> Result<(Vec<RawList>, Vec<Note>), Faults> {
-    let results: Vec<Result<ReadList, Faults>> = campaign
-        .epochs
-        .par_iter()
-        .map(|epoch| read_list(files, epoch))
-        .collect();
+    let (results, notes) = read_each(files, campaign)?;
     let mut faults = Faults::default();
     let mut lists = Vec::with_capacity(results.len());
-    let mut unknown: BTreeMap<(usize, String), usize> = BTreeMap::new();
-    for (epoch, result) in campaign.epochs.iter().zip(results) {
+    for result in results {
         match result {
-            Ok(read) => {
-                for name in read.unknown {
-                    *unknown.entry((epoch.instrument, name)).or_default() += 1;
-                }
-                lists.push(read.list);
-            }
+            Ok(list) => lists.push(list),
             Err(f) => faults.append(f),
         }
     }
-    faults.or((lists, unknown_column_notes(campaign, &unknown)))
+    faults.or((lists, notes))
+}
+
+/// Each list or its faults, and notes on those that could be read.
+///
+/// # Errors
+/// The faults of a table that holds all epochs.
+#[allow(clippy::type_complexity)]
+pub(super) fn read_each(
+    files: &dyn Files,
+    campaign: &Campaign,
+) -> Result<(Vec<Result<RawList, Faults>>, Vec<Note>), Faults> {
+    let (mut shared, mut notes) = one_table::read(files, campaign)?;
+    let results: Vec<Result<ReadList, Faults>> = campaign
+        .epochs
+        .par_iter()
+        .zip(shared.par_iter_mut())
+        .map(|(epoch, part)| read_list(files, campaign, epoch, part.take()))
+        .collect();
+    let mut unknown: BTreeMap<(usize, String), usize> = BTreeMap::new();
+    let lists = campaign
+        .epochs
+        .iter()
+        .zip(results)
+        .map(|(epoch, result)| {
+            result.map(|read| {
+                for name in read.unknown {
+                    *unknown.entry((epoch.instrument, name)).or_default() += 1;
+                }
+                read.list
+            })
+        })
+        .collect();
+    notes.extend(unknown_column_notes(campaign, &unknown));
+    Ok((lists, notes))
 }
 
 struct ReadList {
@@ -61,15 +87,32 @@ struct ReadList {
     unknown: Vec<String>,
 }
 
-fn read_list(files: &dyn Files, epoch: &Epoch) -> Result<ReadList, Faults> {
-    let ListSource::File(path) = &epoch.source else {
-        return Ok(ReadList {
-            list: RawList::default(),
-            unknown: Vec::new(),
-        });
+fn read_list(
+    files: &dyn Files,
+    campaign: &Campaign,
+    epoch: &Epoch,
+    part: Option<Table>,
+) -> Result<ReadList, Faults> {
+    let (path, table) = match (&epoch.source, &campaign.lists) {
+        (ListSource::File(path), _) => {
+            let bytes = files::read(files, path)?;
+            (path, read_table(&bytes, path, &epoch.settings, None)?)
+        }
+        (ListSource::Key(key), Some(one)) => {
+            let nothing = || one_table::no_rows(one, key);
+            (&one.file, part.ok_or_else(nothing)?)
+        }
+        (ListSource::Key(key), None) => {
+            return Err(Faults::one(
+                Place::file(&campaign.path),
+                FaultKind::MissingKey {
+                    table: "the top level".to_owned(),
+                    key: "[lists]".to_owned(),
+                    expected: format!("epoch key `{key}` needs one table for all epochs"),
+                },
+            ));
+        }
     };
-    let bytes = files::read(files, path)?;
-    let table = read_table(&bytes, path, epoch)?;
     let unknown = table.plan.unknown.clone();
     let mut list = raw_list::build(table, path, &epoch.settings)?;
     if let Some(mask) = &epoch.mask {
@@ -78,33 +121,41 @@ fn read_list(files: &dyn Files, epoch: &Epoch) -> Result<ReadList, Faults> {
     Ok(ReadList { list, unknown })
 }
 
-/// Reads a table of whatever kind its content shows.
-fn read_table(bytes: &[u8], path: &Path, epoch: &Epoch) -> Result<Table, Faults> {
-    let bytes = kind::plain(bytes, path)?;
+/// Reads a table of whatever kind its content shows; `key` is the column of the epoch's key in
+/// a table that holds all epochs.
+pub(super) fn read_table(
+    bytes: &[u8],
+    path: &Path,
+    instrument: &Instrument,
+    key: Option<&str>,
+) -> Result<Table, Faults> {
+    let headerless = columns::headerless(instrument);
     let mut plan =
-        |heads: &[columns::Head], place: &Place| columns::plan(heads, &epoch.settings, None, place);
+        |heads: &[columns::Head], place: &Place| columns::plan(heads, instrument, key, place);
+    read_any(bytes, path, headerless, &mut plan)
+}
+
+/// Reads a table of any kind into the columns that a plan wants.
+pub(super) fn read_any(
+    bytes: &[u8],
+    path: &Path,
+    headerless: bool,
+    plan: &mut Planner<'_>,
+) -> Result<Table, Faults> {
+    let bytes = kind::plain(bytes, path)?;
     let text = || files::text(&bytes, path);
     match kind::kind(&bytes) {
-        Kind::Ecsv => ecsv_list::read_ecsv(text()?, path, &mut plan),
-        Kind::Text if columns::headerless(&epoch.settings) => {
-            delimited::read_white_space(text()?, path, &mut plan)
-        }
-        Kind::Text => delimited::read_csv(text()?, path, &mut plan),
-        other => Err(Faults::one(
-            Place::file(path),
-            FaultKind::Format {
-                format: format!("{other:?}"),
-                reason: "this kind of table is not read yet".to_owned(),
-            },
-        )),
+        Kind::Ecsv => ecsv_list::read_ecsv(text()?, path, plan),
+        Kind::Text if headerless => delimited::read_white_space(text()?, path, plan),
+        Kind::Text => delimited::read_csv(text()?, path, plan),
+        other => planned::from_table(kind::read(other, &bytes, path)?, path, plan),
     }
 }
 
 /// Circles `x,y,radius` in list units.
 fn read_mask(files: &dyn Files, path: &Path) -> Result<Vec<[f64; 3]>, Faults> {
     let bytes = files::read(files, path)?;
-    let text = files::text(&bytes, path)?;
-    let table = delimited::read_csv(text, path, &mut |heads, place| {
+    let table = read_any(&bytes, path, false, &mut |heads, place| {
         columns::plan_of(heads, &["x", "y", "radius"], &[], place)
     })?;
     let column = |role| table.numbers(role);
@@ -118,7 +169,7 @@ fn read_mask(files: &dyn Files, path: &Path) -> Result<Vec<[f64; 3]>, Faults> {
         ] {
             if !ok {
                 faults.push(
-                    table.rows.place(path, k).with_column(name),
+                    table.place(path, k).with_column(name),
                     raw_list::not_as_expected(
                         values[k],
                         "a number above 0 for the radius, and a place",
@@ -161,14 +212,4 @@ fn unknown_column_notes(
             ),
         })
         .collect()
-}
-
-impl Table {
-    /// Numbers of a role; empty when the table has no such column.
-    pub(super) fn numbers(&self, role: &str) -> &[f64] {
-        match self.plan.role(role).map(|(c, _)| &self.columns[c]) {
-            Some(delimited::Column::Numbers(v)) => v,
-            _ => &[],
-        }
-    }
 }

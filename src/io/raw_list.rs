@@ -73,7 +73,7 @@ pub(super) fn build(
             Column::Ids(ids) => ids,
             _ => Ids::default(),
         },
-        None => Ids::Numbers((1..=n as u64).collect()),
+        None => Ids::Numbers((0..n).map(|k| u64::from(table.file_row(k)) + 1).collect()),
     };
     checks.ids(&table, &ids);
     let given_name = match table.plan.role("given_name") {
@@ -87,7 +87,10 @@ pub(super) fn build(
 
     let order = canonical_order(&x, &y, &mag, &ids);
     let list = RawList {
-        file_row: order.iter().map(|&k| k + 1).collect(),
+        file_row: order
+            .iter()
+            .map(|&k| table.file_row(k as usize) + 1)
+            .collect(),
         x: picked(&x, &order),
         y: picked(&y, &order),
         err: picked(&err, &order),
@@ -131,7 +134,7 @@ impl Checks<'_> {
             .plan
             .role(role)
             .map_or(role, |(c, _)| table.heads[c].name.as_str());
-        let place = table.rows.place(self.path, row).with_column(name);
+        let place = table.place(self.path, row).with_column(name);
         self.faults.push(place, kind);
     }
 
@@ -273,7 +276,7 @@ impl Checks<'_> {
             self.fault(table, row, "id", FaultKind::EmptyCell);
         }
         for (first, second) in repeated(ids) {
-            let first_place = table.rows.place(self.path, first);
+            let first_place = table.place(self.path, first);
             let first = match (first_place.line, first_place.row) {
                 (Some(line), _) => format!("in line {line}"),
                 (_, Some(row)) => format!("in row {row}"),

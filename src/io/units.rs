@@ -12,6 +12,8 @@ pub(super) enum Quantity {
     /// A position angle, wanted in degrees.
     Angle,
     Magnitude,
+    /// A proper motion, wanted in mas/yr.
+    Motion,
     /// Wanted in km/s.
     Speed,
     Bare,
@@ -58,6 +60,16 @@ pub(super) fn factor(stated: &str, wanted: Quantity) -> Option<f64> {
             "mmag" => Some(1e-3),
             _ => None,
         },
+        Quantity::Motion => {
+            let per_year = [
+                "/yr", "yr-1", ".yr-1", ".yr**-1", "*yr-1", "yr**-1", ".yr^-1",
+            ];
+            let length = per_year
+                .iter()
+                .rev()
+                .find_map(|end| plain.strip_suffix(end))?;
+            mas(length.trim_end_matches(['.', '*']))
+        }
         Quantity::Speed => match plain.as_str() {
             "km/s" | "kms-1" | "km.s-1" | "km.s**-1" | "km*s-1" | "kms**-1" | "kms^-1"
             | "km.s^-1" => Some(1.0),
@@ -93,6 +105,14 @@ mod tests {
         for spelling in ["km / s", "km s-1", "km.s**-1", "km/s"] {
             assert_eq!(factor(spelling, Quantity::Speed), Some(1.0), "{spelling}");
         }
+    }
+
+    #[test]
+    fn the_same_proper_motion_in_every_standard_spelling() {
+        for spelling in ["mas / yr", "mas yr-1", "mas.yr**-1", "mas/yr"] {
+            assert_eq!(factor(spelling, Quantity::Motion), Some(1.0), "{spelling}");
+        }
+        assert_eq!(factor("arcsec / yr", Quantity::Motion), Some(1000.0));
     }
 
     #[test]

@@ -3,6 +3,7 @@
 
 pub mod assign;
 pub mod cov2;
+pub mod hull;
 pub mod lnprob;
 pub mod order;
 pub mod sky;

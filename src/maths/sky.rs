@@ -67,9 +67,31 @@ impl TangentPlane {
     }
 }
 
+/// Matrix `[a, b, c, d]` that takes list coordinates (u, v) to x = a u + b v toward east and
+/// y = c u + d v toward north: +v lies at position angle `angle_deg` (north through east), +u at
+/// 90 degrees more, or less when `east_left`.
+#[must_use]
+pub fn plane_axes(scale_mas: f64, angle_deg: f64, east_left: bool) -> [f64; 4] {
+    let (s, c) = angle_deg.to_radians().sin_cos();
+    let u = if east_left { -scale_mas } else { scale_mas };
+    [u * c, scale_mas * s, -u * s, scale_mas * c]
+}
+
 #[cfg(test)]
 mod tests {
     use super::*;
+
+    #[test]
+    fn plane_axes_point_where_the_format_says() {
+        // +v at 90 degrees is east; +u at 180 degrees is south.
+        let m = plane_axes(2.0, 90.0, false);
+        let at = |u: f64, v: f64| [m[0] * u + m[1] * v, m[2] * u + m[3] * v];
+        let close = |a: [f64; 2], b: [f64; 2]| (a[0] - b[0]).hypot(a[1] - b[1]) < 1e-12;
+        assert!(close(at(0.0, 1.0), [2.0, 0.0]) && close(at(1.0, 0.0), [0.0, -2.0]));
+        // An ordinary direct image: north up, east left.
+        let m = plane_axes(1.0, 0.0, true);
+        assert_eq!([m[0], m[3]], [-1.0, 1.0]);
+    }
 
     /// ERFA test suite `t_erfa_c.c` (BSD-type licence; derived from IAU SOFA), `t_tpxes`.
     #[test]

@@ -4,6 +4,7 @@ pub mod campaign;
 pub mod change;
 pub mod detection;
 pub mod flag;
+pub mod known;
 pub mod motion;
 pub mod note;
 pub mod region;

@@ -3,11 +3,7 @@
 use std::path::PathBuf;
 
 use asterskein::engine::Observer;
-use asterskein::io::campaign::read_campaign;
-use asterskein::io::lists::read_lists;
-use asterskein::maths::order::median;
-use asterskein::model::campaign::{Campaign, Unit};
-use asterskein::model::detection::RawList;
+use asterskein::io::check::{Check, EpochSummary, check};
 use serde_json::json;
 
 use super::super::exit::Exit;
@@ -21,149 +17,138 @@ pub struct Args {
     pub campaign: PathBuf,
 }
 
+/// Gaps between epochs shorter than this are not worth a line \[yr\].
+const LONG_GAP_YR: f64 = 1.5;
+
 pub fn run(args: &Args, printer: &Printer) -> anyhow::Result<Exit> {
     let progress = Progress::new(printer);
     progress.stage("reading", None);
-    let (campaign, mut notes) = read_campaign(&args.campaign)?;
-    let (lists, more) = read_lists(&campaign)?;
-    notes.extend(more);
+    let found = check(&args.campaign);
     progress.finish();
 
-    let found: Vec<Found> = (0..lists.len())
-        .map(|e| Found::of(&campaign, e, &lists[e]))
-        .collect();
-    if !printer.json && !printer.quiet {
-        printer.data(&table(&campaign, &found).to_string());
+    if !printer.json && !printer.quiet && !found.epochs.is_empty() {
+        printer.data(&table(&found.epochs).to_string());
     }
-    printer.notes(&notes);
-    let n: usize = lists.iter().map(RawList::len).sum();
-    let times: Vec<f64> = campaign.epochs.iter().map(|e| e.time.yr()).collect();
-    let first = times.iter().copied().fold(f64::INFINITY, f64::min);
-    let last = times.iter().copied().fold(f64::NEG_INFINITY, f64::max);
+    printer.notes(&found.notes);
+    for fault in found.faults.kept() {
+        printer.error(&anyhow::Error::new(fault.clone()));
+    }
+    let hidden = found.faults.count() - found.faults.kept().len();
+    if hidden > 0 {
+        printer.error(&anyhow::anyhow!("{hidden} more faults like these"));
+    }
+    printer.summary(&summary(&found));
+    Ok(if found.faults.is_empty() {
+        Exit::Done
+    } else {
+        Exit::Failed
+    })
+}
+
+fn summary(found: &Check) -> Summary {
     let mut s = Summary::default();
-    s.line(
-        "campaign",
-        "campaign",
-        campaign.name.clone(),
-        campaign.name.clone(),
-    );
-    s.line("epochs", "epochs", lists.len().to_string(), lists.len());
-    s.line("detections", "detections", n.to_string(), n);
-    s.line(
-        "span_yr",
-        "span",
-        format!("{first:.2} to {last:.2} ({:.1} yr)", last - first),
-        last - first,
-    );
-    s.line("notes", "notes", notes.len().to_string(), notes.len());
-    s.line(
-        "lists",
-        "",
-        "",
-        found.iter().map(Found::json).collect::<Vec<_>>(),
-    );
-    printer.summary(&s);
-    Ok(Exit::Done)
-}
-
-/// Figures of one list.
-struct Found {
-    epoch: usize,
-    n: usize,
-    /// 5 % and 95 % of the magnitudes.
-    mag: Option<(f64, f64)>,
-    /// Median of the larger stated error \[mas\].
-    err_mas: Option<f64>,
-    /// Detections per resolution element of the list's extent.
-    crowding: Option<f64>,
-}
-
-impl Found {
-    fn of(campaign: &Campaign, epoch: usize, list: &RawList) -> Self {
-        let settings = &campaign.epochs[epoch].settings;
-        let mut mags: Vec<f64> = list.mag.iter().copied().filter(|m| m.is_finite()).collect();
-        mags.sort_by(f64::total_cmp);
-        let at = |q: f64| mags[((mags.len() - 1) as f64 * q).round() as usize];
-        let mas = |unit: Unit| match unit {
-            Unit::Mas => Some(1.0),
-            Unit::Arcsec => Some(1e3),
-            Unit::Deg => Some(3.6e6),
-            Unit::Pixel => settings.scale_mas,
+    if let Some(campaign) = &found.campaign {
+        let name = &campaign.name;
+        s.line("campaign", "campaign", name.clone(), name.clone());
+        let (n, good) = (campaign.epochs.len(), found.epochs.len());
+        let text = if n == good {
+            n.to_string()
+        } else {
+            format!("{n}, {good} of them readable")
         };
-        let mut errors: Vec<f64> = list
-            .err
+        s.line("epochs", "epochs", text, n);
+        let rows: usize = found.epochs.iter().map(|e| e.n_rows).sum();
+        s.line("detections", "detections", rows.to_string(), rows);
+        let times = || campaign.epochs.iter().map(|e| e.time.yr());
+        let (first, last) = (
+            times().fold(f64::INFINITY, f64::min),
+            times().fold(f64::NEG_INFINITY, f64::max),
+        );
+        s.line(
+            "span_yr",
+            "span",
+            format!("{first:.2} to {last:.2} ({:.1} yr)", last - first),
+            last - first,
+        );
+        let gaps: Vec<(f64, f64)> = found
+            .epochs
             .iter()
-            .flatten()
-            .map(|c| c.max_var().sqrt())
+            .filter_map(|e| Some((e.time_yr, e.gap_yr?)))
             .collect();
-        let err = median(&mut errors);
-        Self {
-            epoch,
-            n: list.len(),
-            mag: (!mags.is_empty()).then(|| (at(0.05), at(0.95))),
-            err_mas: err.and_then(|e| Some(e * mas(settings.error_unit)?)),
-            crowding: mas(settings.unit)
-                .and_then(|scale| crowding(list, scale, settings.unit, settings.fwhm_mas)),
+        if let Some(&(end, gap)) = gaps.iter().max_by(|a, b| a.1.total_cmp(&b.1)) {
+            let n_long = gaps.iter().filter(|g| g.1 > LONG_GAP_YR).count();
+            s.line(
+                "longest_gap_yr",
+                "longest gap",
+                format!("{gap:.2} yr before {end:.2} ({n_long} longer than {LONG_GAP_YR} yr)"),
+                gap,
+            );
         }
     }
-
-    fn json(&self) -> serde_json::Value {
-        json!({
-            "epoch": self.epoch,
-            "detections": self.n,
-            "mag_5_percent": self.mag.map(|m| m.0),
-            "mag_95_percent": self.mag.map(|m| m.1),
-            "median_error_mas": self.err_mas,
-            "stars_per_resolution_element": self.crowding,
-        })
-    }
+    let n = found.notes.len();
+    s.line("notes", "notes", n.to_string(), n);
+    let n = found.faults.count();
+    s.line("faults", "faults", n.to_string(), n);
+    let lists: Vec<_> = found.epochs.iter().map(as_json).collect();
+    s.line("lists", "", "", lists);
+    s
 }
 
-/// Detections per resolution element (a circle of one fwhm across) in the middle half of the
-/// list along both axes, where the edges do not count.
-fn crowding(list: &RawList, scale_mas: f64, unit: Unit, fwhm_mas: f64) -> Option<f64> {
-    let quartiles = |v: &[f64]| {
-        let mut v = v.to_vec();
-        v.sort_by(f64::total_cmp);
-        Some((*v.get(v.len() / 4)?, *v.get(v.len() * 3 / 4)?))
-    };
-    let (x, y) = (quartiles(&list.x)?, quartiles(&list.y)?);
-    let inside = |k: usize| (x.0..=x.1).contains(&list.x[k]) && (y.0..=y.1).contains(&list.y[k]);
-    let n = (0..list.len()).filter(|&k| inside(k)).count();
-    let cos_dec = if unit == Unit::Deg {
-        (0.5 * (y.0 + y.1)).to_radians().cos()
-    } else {
-        1.0
-    };
-    let area_mas2 = (x.1 - x.0) * cos_dec * (y.1 - y.0) * scale_mas * scale_mas;
-    let element_mas2 = std::f64::consts::FRAC_PI_4 * fwhm_mas * fwhm_mas;
-    (area_mas2 > 0.0).then(|| n as f64 * element_mas2 / area_mas2)
+fn as_json(e: &EpochSummary) -> serde_json::Value {
+    json!({
+        "epoch": e.epoch,
+        "name": e.name,
+        "time_yr": e.time_yr,
+        "instrument": e.instrument,
+        "targeted": e.targeted,
+        "detections": e.n_rows,
+        "gap_yr": e.gap_yr,
+        "error_floor_mas": e.err_floor_mas,
+        "error_median_mas": e.err_median_mas,
+        "brightest_mag": e.mag.map(|m| m[0]),
+        "median_mag": e.mag.map(|m| m[1]),
+        "faintest_mag": e.mag.map(|m| m[2]),
+        "without_mag": e.n_without_mag,
+        "width_mas": e.width_mas,
+        "stars_per_element": e.crowding,
+    })
 }
 
-fn table(campaign: &Campaign, found: &[Found]) -> Lines {
+fn table(epochs: &[EpochSummary]) -> Lines {
     let mut lines = Lines::new(&[
         ("epoch", Align::Left),
         ("time_yr", Align::Right),
+        ("gap_yr", Align::Right),
         ("instrument", Align::Left),
-        ("detections", Align::Right),
-        ("mag 5 %", Align::Right),
-        ("mag 95 %", Align::Right),
+        ("rows", Align::Right),
+        ("mag", Align::Right),
+        ("median", Align::Right),
         ("error_mas", Align::Right),
-        ("per element", Align::Right),
+        ("floor", Align::Right),
+        ("width_mas", Align::Right),
+        ("stars/element", Align::Right),
     ]);
     let number =
         |v: Option<f64>, decimals: usize| v.map_or_else(String::new, |v| format!("{v:.decimals$}"));
-    for f in found {
-        let epoch = &campaign.epochs[f.epoch];
+    for e in epochs {
+        let instrument = if e.targeted {
+            format!("{} (targeted)", e.instrument)
+        } else {
+            e.instrument.clone()
+        };
         lines.push(vec![
-            epoch.name.clone(),
-            format!("{:.4}", epoch.time.yr()),
-            campaign.instruments[epoch.instrument].name.clone(),
-            f.n.to_string(),
-            number(f.mag.map(|m| m.0), 2),
-            number(f.mag.map(|m| m.1), 2),
-            number(f.err_mas, 3),
-            number(f.crowding, 4),
+            e.name.clone(),
+            format!("{:.4}", e.time_yr),
+            number(e.gap_yr, 2),
+            instrument,
+            e.n_rows.to_string(),
+            e.mag
+                .map_or_else(String::new, |m| format!("{:.1}..{:.1}", m[0], m[2])),
+            number(e.mag.map(|m| m[1]), 2),
+            number(e.err_median_mas, 3),
+            number(e.err_floor_mas, 3),
+            format!("{:.0}x{:.0}", e.width_mas[0], e.width_mas[1]),
+            number(e.crowding, 4),
         ]);
     }
     lines
