@@ -2,7 +2,10 @@
 
 mod accepted;
 mod bad_input;
+mod check;
+mod formats;
 mod injected;
+mod known;
 
 use std::path::{Path, PathBuf};
 
