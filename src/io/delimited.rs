@@ -340,7 +340,7 @@ impl Rows<'_> {
             }
             let line = record.position().map_or(1, csv::Position::line);
             let line_no = first_line + line as usize - 1;
-            if record.iter().all(<[u8]>::is_empty) && record.len() == 1 {
+            if record.len() == 1 && record[0].trim_ascii().is_empty() {
                 continue;
             }
             self.begin(line_no);

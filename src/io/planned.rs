@@ -1,12 +1,13 @@
 //! A table already in memory (FITS, VOTable, Parquet) to the columns that a plan wants.
 
+use std::collections::BTreeMap;
 use std::path::Path;
 
 use super::columns::{Head, Plan, Want};
 use super::delimited::{Column, Planner, RowPlaces, Table, push_id};
 use super::fault::{FaultKind, Faults, Place};
 use super::number_text::push_float;
-use super::table::{self, Precision, Values};
+use super::table::{self, Precision, Source, Texts, Values};
 use crate::model::detection::Ids;
 
 /// Takes the wanted columns. Masked values and `NaN` are "not measured".
@@ -18,6 +19,7 @@ pub(super) fn from_table(
     path: &Path,
     plan: &mut Planner<'_>,
 ) -> Result<Table, Faults> {
+    let table = masked(table);
     let heads: Vec<Head> = table
         .columns
         .iter()
@@ -60,6 +62,66 @@ pub(super) fn from_table(
         rows: RowPlaces::Numbered,
         taken: None,
     })
+}
+
+/// Applies columns `NAME.mask` (true = none), as astropy keeps masks in formats or columns that
+/// have no nulls of their own, and leaves them out.
+fn masked(table: table::Table<'_>) -> table::Table<'_> {
+    const SUFFIX: &str = ".mask";
+    let n_rows = table.n_rows();
+    let masks: BTreeMap<String, Vec<bool>> = table
+        .columns
+        .iter()
+        .filter_map(|c| {
+            let of = c.name.strip_suffix(SUFFIX)?;
+            match &c.values {
+                Values::Bool(s) if table.column(of).is_some() => {
+                    let mask = (0..n_rows).map(|k| s.at(k) == Some(true)).collect();
+                    Some((of.to_owned(), mask))
+                }
+                _ => None,
+            }
+        })
+        .collect();
+    if masks.is_empty() {
+        return table;
+    }
+    let mut out = table::Table::new(&table.name, &table.description, n_rows);
+    for mut column in table.columns {
+        let is_mask = column
+            .name
+            .strip_suffix(SUFFIX)
+            .is_some_and(|of| masks.contains_key(of));
+        if let Some(mask) = masks.get(&column.name) {
+            column.values = under_mask(&column.values, mask);
+        }
+        if !is_mask {
+            out.push(column);
+        }
+    }
+    out
+}
+
+fn under_mask(values: &Values<'_>, mask: &[bool]) -> Values<'static> {
+    let rows = || mask.iter().enumerate();
+    match values {
+        Values::Float(s, precision) => {
+            let of = |(k, &none): (usize, &bool)| if none { f64::NAN } else { s.at(k) };
+            Values::Float(Source::Held(rows().map(of).collect()), *precision)
+        }
+        Values::Int(s) => {
+            let of = |(k, &none): (usize, &bool)| if none { None } else { s.at(k) };
+            Values::Int(Source::Held(rows().map(of).collect()))
+        }
+        Values::Bool(s) => {
+            let of = |(k, &none): (usize, &bool)| if none { None } else { s.at(k) };
+            Values::Bool(Source::Held(rows().map(of).collect()))
+        }
+        Values::Text(t) => {
+            let of = |(k, &none): (usize, &bool)| if none { String::new() } else { t.at(k) };
+            Values::Text(Texts::Held(rows().map(of).collect()))
+        }
+    }
 }
 
 fn numbers(
