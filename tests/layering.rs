@@ -21,7 +21,9 @@ pub const MAY_IMPORT: &[(&str, &[&str])] = &[
     ),
     (
         "track",
-        &["maths", "model", "motion", "near", "sensor", "resolve"],
+        &[
+            "maths", "model", "motion", "near", "sensor", "link", "resolve",
+        ],
     ),
     (
         "engine",

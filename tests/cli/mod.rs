@@ -74,9 +74,8 @@ fn sample() -> (tempfile::TempDir, PathBuf) {
 }
 
 #[test]
-fn help_and_wrong_usage() {
+fn wrong_usage() {
     let (_keep, folder) = sample();
-    case("help", &folder, &["--help"]);
     case("no-command", &folder, &["lnik"]);
     case(
         "list-unknown-column",

@@ -275,12 +275,13 @@ fn solution(epochs: &[FieldEpoch]) -> Solution {
             track("L00003", MotionKind::Linear, None),
         ],
         members: vec![
-            member(0, 0, 0, 1.0),
-            member(0, 1, 0, 0.625),
-            member(1, 0, 1, 1.0),
-            member(1, 1, 0, 0.375),
+            // Rows count in the order of x: `one` is 9, 7; `two` is 2, 1, 3.
+            member(0, 0, 1, 1.0),
+            member(0, 1, 1, 0.625),
+            member(1, 0, 0, 1.0),
+            member(1, 1, 1, 0.375),
         ],
-        leftovers: vec![leftover(1, 1, Some((2, 12.5))), leftover(1, 2, None)],
+        leftovers: vec![leftover(1, 0, Some((1, 12.5))), leftover(1, 2, None)],
         epochs: vec![report(0, None), report(1, Some("too few stars in common"))],
         tangles: vec![
             tangle(Certificate::Bounded { gap_nats: 0.375 }, &[0, 1]),
