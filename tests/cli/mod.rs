@@ -3,6 +3,8 @@
 //! Each case is compared with a text file beside this one; `ASTERSKEIN_ACCEPT=1` rewrites them.
 //! Folders and times are filtered.
 
+mod linking;
+
 use std::fs;
 use std::path::{Path, PathBuf};
 use std::process::Command;

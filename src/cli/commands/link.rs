@@ -7,6 +7,7 @@ use asterskein::engine::{self, Observer, Settings};
 use asterskein::frame;
 use asterskein::io::campaign::read_campaign;
 use asterskein::io::format::Format;
+use asterskein::io::known::read_known_stars;
 use asterskein::io::lists::read_lists;
 use asterskein::io::result_tables::RunView;
 use asterskein::io::rulings::read_rulings;
@@ -16,8 +17,11 @@ use asterskein::io::write_run::{self, RunRecord, inputs_of};
 use asterskein::model::campaign::Campaign;
 use asterskein::model::detection::{FieldEpoch, RawList};
 use asterskein::model::flag::Flags;
+use asterskein::model::known::KnownStar;
 use asterskein::model::note::Note;
 use asterskein::model::result::{Certificate, Solution};
+use asterskein::model::ruling::Ruling;
+use asterskein::output::known_names::{given_name_notes, known_names};
 use asterskein::output::naming::{self, OldNames, Renamed, Renaming, What};
 use asterskein::output::report::{self, Budget, ReportInput, Scope};
 use serde_json::json;
@@ -102,6 +106,10 @@ pub fn run(args: &Args, printer: &Printer, threads: usize) -> anyhow::Result<Exi
     let (campaign, mut notes) = read_campaign(&args.campaign)?;
     let (lists, more) = read_lists(&campaign)?;
     notes.extend(more);
+    let known = match campaign.known_stars.as_ref().filter(|k| k.for_names) {
+        Some(list) => read_known_stars(list)?,
+        None => Vec::new(),
+    };
     let rulings = match &args.rulings {
         Some(path) => read_rulings(path, &campaign, &lists)?,
         None => Vec::new(),
@@ -122,7 +130,12 @@ pub fn run(args: &Args, printer: &Printer, threads: usize) -> anyhow::Result<Exi
     progress.stage("writing", None);
     let inputs = inputs_of(&campaign, &further_inputs(args))?;
     let parts = (&campaign, lists.as_slice(), epochs.as_slice());
-    let named = name(parts, &mut solution, &settings, &inputs, old.as_ref());
+    let names = Names {
+        rulings: &settings.rulings,
+        known: &known,
+        old: old.as_ref(),
+    };
+    let named = name(parts, &mut solution, &inputs, &names);
     let view = RunView {
         campaign: &campaign,
         lists: &lists,
@@ -147,6 +160,7 @@ pub fn run(args: &Args, printer: &Printer, threads: usize) -> anyhow::Result<Exi
     )?;
     dir.write("report.html", |out| out.write_all(page.as_bytes()))?;
 
+    notes.extend(given_name_notes(view));
     let (stages, observed) = progress.finish();
     for note in solution.notes.iter().chain(&observed) {
         if !notes.contains(note) {
@@ -182,16 +196,22 @@ fn further_inputs(args: &Args) -> Vec<(&'static str, PathBuf)> {
     rulings.chain(names).collect()
 }
 
-/// Gives the tracks their names: those of rulings first, then those of an earlier result, then
-/// numbers, the brightest first.
+/// Where names come from, the strongest first.
+struct Names<'a> {
+    rulings: &'a [Ruling],
+    known: &'a [KnownStar],
+    old: Option<&'a OldNames>,
+}
+
+/// Gives the tracks their names: those of rulings, of known stars, of an earlier result, and
+/// to the rest numbers, the brightest first.
 fn name(
     (campaign, lists, epochs): (&Campaign, &[RawList], &[FieldEpoch]),
     solution: &mut Solution,
-    settings: &Settings,
     inputs: &[Input],
-    old: Option<&OldNames>,
+    names: &Names<'_>,
 ) -> Renaming {
-    let fixed = naming::ruled_names(solution, &settings.rulings);
+    let mut fixed = naming::ruled_names(solution, names.rulings);
     let none = OldNames::default();
     let view = RunView {
         campaign,
@@ -199,7 +219,12 @@ fn name(
         epochs,
         solution,
     };
-    let renaming = naming::rename(view, inputs, old.unwrap_or(&none), &fixed);
+    for (n, name) in known_names(view, names.known).into_iter().enumerate() {
+        if fixed[n].is_none() && !fixed.contains(&name) {
+            fixed[n] = name;
+        }
+    }
+    let renaming = naming::rename(view, inputs, names.old.unwrap_or(&none), &fixed);
     naming::apply(solution, &renaming.names);
     renaming
 }
