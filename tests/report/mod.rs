@@ -5,6 +5,7 @@
 
 mod made;
 
+use std::io::Read;
 use std::path::Path;
 use std::time::Instant;
 
@@ -32,12 +33,85 @@ fn page(m: &Made, scope: &Scope, budget: Budget) -> String {
     html(&input(m, &[]), scope, budget).expect("a page")
 }
 
+/// The header that a page carries: base64 (RFC 4648), zlib, a length, JSON.
+fn header_of(page: &str) -> serde_json::Value {
+    let start = page.find("id=\"run\">").expect("data") + 9;
+    let text = &page[start..start + page[start..].find('<').expect("an end")];
+    let digit = |c: u8| match c {
+        b'A'..=b'Z' => c - b'A',
+        b'a'..=b'z' => c - b'a' + 26,
+        b'0'..=b'9' => c - b'0' + 52,
+        b'+' => 62,
+        _ => 63,
+    };
+    let mut packed = Vec::new();
+    for quad in text.trim_end_matches('=').as_bytes().chunks(4) {
+        let word = quad
+            .iter()
+            .fold(0_u32, |w, &c| (w << 6) | u32::from(digit(c)))
+            << (6 * (4 - quad.len()));
+        packed.extend((0..quad.len() - 1).map(|k| (word >> (16 - 8 * k)) as u8));
+    }
+    let mut plain = Vec::new();
+    flate2::read::ZlibDecoder::new(&packed[..])
+        .read_to_end(&mut plain)
+        .expect("zlib");
+    let length = u32::from_le_bytes(plain[..4].try_into().expect("a length"));
+    serde_json::from_slice(&plain[4..4 + length as usize]).expect("JSON")
+}
+
+#[test]
+fn a_large_field_is_thinned_and_says_so() {
+    let m = made(400, 20, 21);
+    let budget = Budget {
+        detections: 3000,
+        tracks: 150,
+    };
+    let whole = header_of(&page(&m, &Scope::Whole, Budget::default()));
+    let thin = header_of(&page(&m, &Scope::Whole, budget));
+    assert_eq!(whole["left_out"].as_array().unwrap().len(), 0);
+    let words = thin["left_out"].to_string();
+    assert!(words.contains("250 further tracks"), "{words}");
+    // Counts are those of the run, not of the page.
+    assert_eq!(thin["counts"], whole["counts"]);
+    assert_eq!(thin["counts"]["tracks"], 400);
+    let shown = thin["epochs"].as_array().unwrap().iter();
+    let n: u64 = shown.map(|e| e["shown"].as_u64().unwrap()).sum();
+    assert!((1500..=3000).contains(&n), "{n} detections");
+    // Confused and flagged tracks come first.
+    let names = thin["tracks"]["name"].as_array().unwrap();
+    assert_eq!(names.len(), 150);
+    let confused = m.solution.tracks.iter().filter(|t| t.tangle.is_some());
+    for t in confused.take(100) {
+        assert!(names.iter().any(|n| n == t.name.as_str()), "{}", t.name);
+    }
+}
+
+#[test]
+fn a_tangle_comes_with_its_neighbours_and_rivals() {
+    let m = made(400, 20, 21);
+    let wanted = &m.solution.tangles[0];
+    let part = header_of(&page(&m, &Scope::Tangle(0), Budget::default()));
+    let names = part["tracks"]["name"].as_array().unwrap();
+    for &k in &wanted.tracks {
+        let name = m.solution.tracks[k].name.as_str();
+        assert!(names.iter().any(|n| n == name), "{name}");
+    }
+    assert!(names.len() < 400);
+    let tangle = &part["tangles"][0];
+    let n_rivals = m.solution.rivals.iter().filter(|r| r.tangle == 0).count();
+    assert_eq!(tangle["rivals"].as_array().unwrap().len(), n_rivals);
+    // What the rival's words say is what is drawn.
+    assert_eq!(tangle["rivals"][0]["drawn"][0][0], 2, "drops");
+}
+
 #[test]
 fn names_from_lists_cannot_leave_the_data() {
     let m = made(60, 8, 5);
     assert!(m.solution.tracks.iter().any(|t| t.name == HOSTILE_NAME));
     let page = page(&m, &Scope::Whole, Budget::default());
     assert!(!page.contains("onerror=alert"));
+    assert_eq!(header_of(&page)["tracks"]["name"][3], HOSTILE_NAME);
     assert_eq!(page.matches("</script>").count(), 2);
     assert!(!page.contains("http://") || !page.contains("src=\"http"));
     assert!(!page.contains("{{"));
