@@ -1,7 +1,8 @@
 //! Writing a table as Parquet.
 //!
-//! Every column is optional, so "none" is a null. Units, descriptions and descriptors go into
-//! the file's metadata under `table_meta_yaml`, where astropy looks for them.
+//! Numbers that are "none" are nulls, a text that is "none" is empty. Units, descriptions and
+//! descriptors go into the file's metadata under `table_meta_yaml`, the longest text of each
+//! column under `table::len::` and its name: that is where astropy looks for them.
 
 use std::io::{self, Write};
 use std::sync::Arc;
@@ -57,10 +58,7 @@ fn encode(table: &Table<'_>) -> Result<Vec<u8>, ParquetError> {
             env!("CARGO_PKG_NAME"),
             env!("CARGO_PKG_VERSION")
         ))
-        .set_key_value_metadata(Some(vec![KeyValue::new(
-            "table_meta_yaml".to_owned(),
-            ecsv_write::yaml(table),
-        )]))
+        .set_key_value_metadata(Some(metadata(table)))
         .build();
     let mut writer = SerializedFileWriter::new(Vec::new(), Arc::new(schema), Arc::new(properties))?;
     let n = table.n_rows();
@@ -83,10 +81,7 @@ fn encode(table: &Table<'_>) -> Result<Vec<u8>, ParquetError> {
                 Values::Bool(s) => put::<BoolType>(&mut into, rows.map(|k| s.at(k))),
                 Values::Text(t) => put::<ByteArrayType>(
                     &mut into,
-                    rows.map(|k| {
-                        let text = t.at(k);
-                        (!text.is_empty()).then(|| ByteArray::from(text.into_bytes()))
-                    }),
+                    rows.map(|k| Some(ByteArray::from(t.at(k).into_bytes()))),
                 ),
             }?;
             into.close()?;
@@ -94,6 +89,30 @@ fn encode(table: &Table<'_>) -> Result<Vec<u8>, ParquetError> {
         group.close()?;
     }
     writer.into_inner()
+}
+
+/// What astropy wants to know beyond the columns themselves.
+fn metadata(table: &Table<'_>) -> Vec<KeyValue> {
+    let mut all = vec![KeyValue::new(
+        "table_meta_yaml".to_owned(),
+        ecsv_write::yaml(table),
+    )];
+    for c in &table.columns {
+        if let Values::Text(t) = &c.values {
+            let mut text = String::new();
+            let lengths = (0..table.n_rows()).map(|row| {
+                text.clear();
+                t.push(row, &mut text);
+                text.chars().count()
+            });
+            let longest = lengths.max().unwrap_or(0).max(1);
+            all.push(KeyValue::new(
+                format!("table::len::{}", c.name),
+                longest.to_string(),
+            ));
+        }
+    }
+    all
 }
 
 /// Writes values with their presence as definition levels.

@@ -185,7 +185,7 @@ fn check_shows_the_lists_and_every_fault() {
     case("check-json", &folder, &["check", "campaign.toml", "--json"]);
     fs::write(
         folder.join("e0.csv"),
-        "id,x,y,x_err,y_err,mag\n7,1,nan,0.5,-1,14\n7,2,3,0.5,0.5,\n",
+        "id,x,y,x_err,y_err,mag,sharpness\n7,1,nan,0.5,-1,14,\n7,2,3,0.5,0.5,,\n",
     )
     .expect("written");
     fs::write(folder.join("e1.csv"), "id,x,x_err,y_err\n1,2,3,4\n").expect("written");
