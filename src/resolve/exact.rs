@@ -22,6 +22,9 @@ pub const SMALL: usize = 4;
 /// Gains closer than this count as equal \[nats\].
 pub const TOLERANCE_NATS: f64 = 1e-6;
 
+/// Rounds of fixing at one node.
+const FIXING_PASSES: usize = 6;
+
 /// How much work a tangle may take, in counts.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
 pub struct Budget {
@@ -221,11 +224,7 @@ fn search(program: &Program, best: &mut Best, work: &mut Work) -> f64 {
     if root <= best.gain + TOLERANCE_NATS {
         return root;
     }
-    // What is fixed changes the bound, and a better bound fixes more.
-    while fix(&mut dual, &mut prices, best.gain) {
-        prices = dual.polish(prices, best.gain, TOLERANCE_NATS, work.budget.node_steps);
-        work.steps += std::mem::take(&mut dual.steps);
-    }
+    prices = fix_and_polish(&mut dual, prices, best.gain, work);
     if prices.bound <= best.gain + TOLERANCE_NATS {
         // Everything that differs from a fixed track gains less than what is reached.
         return best.gain;
@@ -283,6 +282,18 @@ fn try_rounding(program: &Program, dual: &Dual, prices: &Prices, best: &mut Best
     work.evaluate(program, &exists, &prices.of_cell, best);
 }
 
+/// What is fixed changes the bound, and a better bound fixes more.
+fn fix_and_polish(dual: &mut Dual, mut prices: Prices, reached: f64, work: &mut Work) -> Prices {
+    for _ in 0..FIXING_PASSES {
+        if !fix(dual, &mut prices, reached) {
+            break;
+        }
+        prices = dual.polish(prices, reached, TOLERANCE_NATS, work.budget.node_steps);
+        work.steps += std::mem::take(&mut dual.steps);
+    }
+    prices
+}
+
 /// Decides every free track one of whose fates cannot beat `reached`; true when any was.
 fn fix(dual: &mut Dual, prices: &mut Prices, reached: f64) -> bool {
     let mut any = false;
@@ -298,9 +309,10 @@ fn fix(dual: &mut Dual, prices: &mut Prices, reached: f64) -> bool {
         } else {
             continue;
         }
-        prices.bound = dual.bound(&prices.of_cell);
         any = true;
     }
+    // Deciding can only lower the bound: until here the old one was a valid, laxer one.
+    prices.bound = dual.bound(&prices.of_cell);
     any
 }
 
@@ -473,10 +485,7 @@ fn branch(
     }
     try_rounding(program, dual, &prices, best, work);
     let before = dual.fates().to_vec();
-    while fix(dual, &mut prices, best.gain) {
-        prices = dual.polish(prices, best.gain, TOLERANCE_NATS, work.budget.node_steps);
-        work.steps += std::mem::take(&mut dual.steps);
-    }
+    prices = fix_and_polish(dual, prices, best.gain, work);
     if prices.bound > best.gain + TOLERANCE_NATS {
         match choose(dual, &prices) {
             None => {

@@ -243,9 +243,8 @@ impl Finder<'_> {
     fn steps(&self, exists: &[bool], moved: &[u32]) -> Vec<Step> {
         let p = self.program;
         let mut steps = Vec::new();
-        for k in 0..p.n_tracks() {
-            let track = k as u32;
-            match (self.best.exists[k], exists[k]) {
+        for (track, (&was, &is)) in (0..).zip(self.best.exists.iter().zip(exists)) {
+            match (was, is) {
                 (true, false) => steps.push(Step::Vanishes { track }),
                 (false, true) => steps.push(Step::Appears { track }),
                 _ => {}
