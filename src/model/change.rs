@@ -4,7 +4,12 @@
 //! sentences have one form: clauses joined by `; `, each of them one [`Change`]. Detections are
 //! written `epoch name:id`. Clauses of another form are allowed and are shown as they stand.
 
+use std::collections::BTreeMap;
 use std::fmt;
+
+use super::campaign::Campaign;
+use super::detection::RawList;
+use super::result::Rival;
 
 /// A detection as people name it.
 #[derive(Clone, Debug, PartialEq, Eq)]
@@ -115,6 +120,44 @@ impl Change {
     pub fn sentence(changes: &[Self]) -> String {
         let words: Vec<String> = changes.iter().map(ToString::to_string).collect();
         words.join("; ")
+    }
+}
+
+/// Linking names detections by their row; this puts the identifiers of the lists in place of rows.
+/// `lists` are in the order of the campaign's epochs. Clauses that name no row stay as they are.
+pub fn rows_to_ids(rivals: &mut [Rival], campaign: &Campaign, lists: &[RawList]) {
+    let by_name: BTreeMap<&str, &RawList> = campaign
+        .epochs
+        .iter()
+        .map(|e| e.name.as_str())
+        .zip(lists)
+        .collect();
+    let rename = |d: &mut DetectionName| {
+        let list = by_name.get(d.epoch_name.as_str());
+        let row = d.id.parse::<usize>().ok();
+        if let (Some(list), Some(row)) = (list, row)
+            && row < list.ids.len()
+        {
+            d.id = list.ids.text(row);
+        }
+    };
+    for rival in rivals {
+        let clauses = rival
+            .change
+            .split("; ")
+            .map(|clause| match Change::read(clause) {
+                Some(mut change) => {
+                    match &mut change {
+                        Change::Takes { detection, .. }
+                        | Change::Shares { detection, .. }
+                        | Change::Drops { detection, .. } => rename(detection),
+                        Change::Vanishes { .. } => {}
+                    }
+                    change.to_string()
+                }
+                None => clause.to_owned(),
+            });
+        rival.change = clauses.collect::<Vec<_>>().join("; ");
     }
 }
 

@@ -4,7 +4,9 @@ use crate::model::campaign::Campaign;
 use crate::model::detection::FieldEpoch;
 use crate::model::flag::Flags;
 use crate::model::motion::MotionKind;
-use crate::model::result::{EpochReport, Leftover, Membership, Solution, TangleReport, Track};
+use crate::model::result::{
+    EpochReport, Leftover, Membership, Rival, Solution, TangleReport, Track,
+};
 use crate::resolve::belief::Beliefs;
 use crate::resolve::scene::Scene;
 use crate::resolve::star::Cell;
@@ -12,7 +14,7 @@ use crate::resolve::work::{self, Work};
 use crate::sensor::blend;
 
 use super::proof::Proved;
-use super::{flags, summary};
+use super::{flags, rivals, summary};
 
 /// Shares below this are not listed: the star has no part in the light that could be checked.
 pub const LEAST_SHARE: f64 = 0.08;
@@ -402,6 +404,28 @@ fn tangle_tables(parts: &Parts, number: &[usize], solution: &mut Solution) {
             work: t.work,
             flags: t.flags,
         });
+        let name = |star: u32| {
+            solution
+                .tracks
+                .get(number[star as usize])
+                .map(|t| t.name.clone())
+        };
+        let listed = t
+            .rivals
+            .iter()
+            .filter_map(|r| Some((r.ln_odds, rivals::sentence(r, parts.campaign, name)?)));
+        let listed: Vec<(f64, String)> = listed.collect();
+        solution.rivals.extend(
+            listed
+                .into_iter()
+                .zip(1..)
+                .map(|((ln_odds, change), rank)| Rival {
+                    tangle: id,
+                    rank,
+                    ln_odds,
+                    change,
+                }),
+        );
     }
     // Tangles in the order of their brightest track.
     let mut order: Vec<usize> = (0..solution.tangles.len()).collect();
@@ -414,4 +438,8 @@ fn tangle_tables(parts: &Parts, number: &[usize], solution: &mut Solution) {
     for t in &mut solution.tracks {
         t.tangle = t.tangle.map(|old| place[old]);
     }
+    for r in &mut solution.rivals {
+        r.tangle = place[r.tangle];
+    }
+    solution.rivals.sort_by_key(|r| (r.tangle, r.rank));
 }

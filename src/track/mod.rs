@@ -4,4 +4,5 @@ pub mod assemble;
 pub mod flags;
 pub mod orbits;
 pub mod proof;
+pub mod rivals;
 pub mod summary;

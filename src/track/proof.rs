@@ -13,6 +13,8 @@ use crate::resolve::program::{Builder, FALSE};
 use crate::resolve::scene::Scene;
 use crate::resolve::work::Work;
 
+use super::rivals::{self, Rivalry};
+
 /// One tangle in the search's own numbering.
 #[derive(Clone, Debug)]
 pub struct Tangle {
@@ -22,6 +24,8 @@ pub struct Tangle {
     pub certificate: Certificate,
     pub work: u64,
     pub flags: Flags,
+    /// Near explanations with one thing changed, best first.
+    pub rivals: Vec<Rivalry>,
 }
 
 #[derive(Clone, Debug, Default)]
@@ -127,5 +131,6 @@ pub fn prove(scene: &Scene, work: &Work, choices: &[Choices], stars: &[u32]) -> 
         certificate,
         work: steps,
         flags,
+        rivals: rivals::find(&program, &incumbent, stars),
     }
 }

@@ -15,6 +15,7 @@ use asterskein::io::run_dir::{Existing, RunDir};
 use asterskein::io::run_info::{self, Input, StageTime, Timing};
 use asterskein::io::write_run::{self, RunRecord, inputs_of};
 use asterskein::model::campaign::Campaign;
+use asterskein::model::change;
 use asterskein::model::detection::{FieldEpoch, RawList};
 use asterskein::model::flag::Flags;
 use asterskein::model::known::KnownStar;
@@ -126,6 +127,7 @@ pub fn run(args: &Args, printer: &Printer, threads: usize) -> anyhow::Result<Exi
         rulings,
     };
     let mut solution = engine::link(&campaign, &epochs, &settings, &progress)?;
+    change::rows_to_ids(&mut solution.rivals, &campaign, &lists);
 
     progress.stage("writing", None);
     let inputs = inputs_of(&campaign, &further_inputs(args))?;
