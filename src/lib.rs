@@ -4,8 +4,10 @@
 #![deny(clippy::print_stdout, clippy::print_stderr)]
 #![warn(missing_debug_implementations)]
 
+pub mod audit;
 pub mod engine;
 pub mod frame;
+pub mod inject;
 pub mod io;
 pub mod link;
 pub mod maths;

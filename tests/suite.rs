@@ -1,9 +1,11 @@
 //! All integration tests, one binary.
 mod cli;
+mod inject;
 mod layering;
 mod motion;
 mod reading;
 mod readme;
 mod report;
 mod results;
+mod score;
 mod solver;

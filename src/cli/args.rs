@@ -50,6 +50,12 @@ pub enum Command {
     Handoff(commands::handoff::Args),
     /// Print a table of a result, or some rows and columns of it.
     List(commands::list::Args),
+    /// Make a campaign with known truth.
+    Mock(commands::mock::Args),
+    /// Put made-up stars into the lists of a result, link again, and count what is found.
+    Recover(commands::recover::Args),
+    /// Judge a result by the truth of its made-up campaign.
+    Score(commands::score::Args),
     /// Draw a result again, or a part of it.
     Report(commands::report::Args),
     /// Say why a track or a detection came out as it did, and how to rule otherwise.

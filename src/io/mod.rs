@@ -25,6 +25,8 @@ pub mod rulings;
 pub mod run_dir;
 pub mod run_info;
 pub mod table;
+pub mod text_table;
+pub mod truth_csv;
 pub mod unit_text;
 pub mod votable_read;
 pub mod votable_write;

@@ -1,0 +1,2 @@
+//! Made-up campaigns against what theory says of them.
+mod confusion;
