@@ -95,6 +95,7 @@ def test_map_is_drawn(tab, report):
     assert colours > 20
     counts = tab.run("document.getElementById('tabs').textContent").replace("\u202f", "")
     assert f"Tracks{len(report.tracks)}" in counts
+    assert tab.run("document.querySelector('#tabs a[aria-current]').dataset.tab") == "field"
 
 
 def test_slider_moves_time(tab, report):

@@ -28,12 +28,11 @@ pub struct Args {
     /// Only this part of the field [mas].
     #[arg(
         long,
-        value_delimiter = ',',
         value_name = "X0,Y0,X1,Y1",
-        num_args = 4,
+        value_parser = read_region,
         allow_hyphen_values = true
     )]
-    pub region: Vec<f64>,
+    pub region: Option<[f64; 4]>,
     /// The page; default: `report.html` in the result directory, or `report-PART.html` for a part.
     #[arg(long, value_name = "FILE")]
     pub out: Option<PathBuf>,
@@ -88,6 +87,22 @@ pub fn run(args: &Args, printer: &Printer) -> anyhow::Result<Exit> {
     Ok(Exit::Done)
 }
 
+/// Four numbers joined by commas.
+fn read_region(text: &str) -> Result<[f64; 4], String> {
+    let numbers: Vec<f64> = text
+        .split(',')
+        .map(|part| part.trim().parse::<f64>())
+        .collect::<Result<_, _>>()
+        .map_err(|_| "four numbers in mas, joined by commas, were expected".to_owned())?;
+    match numbers[..] {
+        [x0, y0, x1, y1] if numbers.iter().all(|v| v.is_finite()) => Ok([x0, y0, x1, y1]),
+        _ => Err(format!(
+            "four numbers in mas were expected, {} found",
+            numbers.len()
+        )),
+    }
+}
+
 fn scope(args: &Args, run: &Run) -> anyhow::Result<Scope> {
     let tracks = &run.solution.tracks;
     if !args.track.is_empty() {
@@ -117,11 +132,8 @@ fn scope(args: &Args, run: &Run) -> anyhow::Result<Scope> {
         }
         return Ok(Scope::Tangle(k));
     }
-    if let [x0, y0, x1, y1] = args.region[..] {
-        if !args.region.iter().all(|v| v.is_finite()) {
-            return Err(UsageError("--region needs four numbers in mas".to_owned()).into());
-        }
-        return Ok(Scope::Region([x0, y0, x1, y1]));
+    if let Some(corners) = args.region {
+        return Ok(Scope::Region(corners));
     }
     Ok(Scope::Whole)
 }
@@ -209,6 +221,14 @@ fn file_name(name: &str) -> String {
 #[cfg(test)]
 mod tests {
     use super::*;
+
+    #[test]
+    fn regions_are_four_numbers() {
+        assert_eq!(read_region("-5,-6.5,7,8"), Ok([-5.0, -6.5, 7.0, 8.0]));
+        assert!(read_region("1,2,3").is_err());
+        assert!(read_region("1,2,3,x").is_err());
+        assert!(read_region("1,2,3,inf").is_err());
+    }
 
     #[test]
     fn names_become_file_names() {

@@ -20,7 +20,8 @@ const TAB_OF = { track: "tracks", tangle: "tangles", epoch: "epochs", claim: "au
 
 function show(run) {
   const [path, query] = location.hash.replace(/^#\//, "").split("?");
-  const [kind = "field", ...rest] = path.split("/").map(decodeURIComponent);
+  const [first, ...rest] = path.split("/").map(decodeURIComponent);
+  const kind = first || "field";
   const what = rest.join("/");
   if (here && here.leave) here.leave();
   here = null;
