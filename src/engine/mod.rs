@@ -1,5 +1,6 @@
 //! The order of stages, and everything that runs in parallel.
 
+pub mod estimate;
 pub mod observer;
 pub mod orbits;
 pub mod pipeline;

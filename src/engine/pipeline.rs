@@ -75,7 +75,7 @@ fn conclude(
     let worth: Vec<f64> = (0..n as u32)
         .into_par_iter()
         .map_init(Scratch::default, |sc, k| {
-            grow::worth(scene, &work, &work.stars[k as usize], Some(k), sc)
+            grow::worth(scene, &work, &work.stars[k as usize], Some(k), sc).total()
         })
         .collect();
     for (star, w) in work.stars.iter_mut().zip(&worth) {

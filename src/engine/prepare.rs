@@ -4,7 +4,7 @@ use rayon::prelude::*;
 
 use crate::model::campaign::{Campaign, Selection};
 use crate::model::detection::FieldEpoch;
-use crate::motion::state::Dynamics;
+use crate::motion::state::{Dynamics, Wide};
 use crate::near::{Hit, Tree};
 use crate::resolve::scene::{Scene, Sight};
 use crate::sensor::Sensor;
@@ -32,6 +32,16 @@ pub fn dynamics(campaign: &Campaign) -> Dynamics {
         None => Dynamics::Free {
             speed_mas_yr: campaign.stars.speed_mas_yr,
             accel_mas_yr2: FREE_ACCEL_SHARE * campaign.stars.speed_mas_yr,
+            wide: campaign.stars.foreground.map_or(
+                Wide {
+                    fraction: 0.02,
+                    speed_mas_yr: 5.0 * campaign.stars.speed_mas_yr,
+                },
+                |f| Wide {
+                    fraction: f.fraction.clamp(0.001, 0.999),
+                    speed_mas_yr: f.speed_mas_yr,
+                },
+            ),
         },
     }
 }
@@ -39,6 +49,7 @@ pub fn dynamics(campaign: &Campaign) -> Dynamics {
 /// The scene with starting laws.
 #[must_use]
 pub fn scene<'a>(campaign: &Campaign, epochs: &'a [FieldEpoch]) -> Scene<'a> {
+    let area = field_area(epochs);
     let sights: Vec<Sight> = epochs
         .par_iter()
         .enumerate()
@@ -64,7 +75,7 @@ pub fn scene<'a>(campaign: &Campaign, epochs: &'a [FieldEpoch]) -> Scene<'a> {
                 ln_false: Vec::new(),
                 ln_star: Vec::new(),
             };
-            s.ln_star = densities(&s);
+            s.ln_star = densities(&s, area);
             apply_laws(&mut s);
             s
         })
@@ -92,22 +103,28 @@ pub fn apply_laws(s: &mut Sight) {
     s.ln_false = s.ln_star.iter().map(|l| l + ln_share).collect();
 }
 
+/// Area of the box that holds every detection of every epoch \[mas^2\]: a list of one star says
+/// nothing of the area it was drawn from, the campaign does.
+fn field_area(epochs: &[FieldEpoch]) -> f64 {
+    let (mut lo, mut hi) = ([f64::INFINITY; 2], [f64::NEG_INFINITY; 2]);
+    let mut side = 1.0_f64;
+    for e in epochs {
+        side = side.max(e.fwhm_mas);
+        for (x, y) in e.x_mas.iter().zip(&e.y_mas) {
+            lo = [lo[0].min(*x), lo[1].min(*y)];
+            hi = [hi[0].max(*x), hi[1].max(*y)];
+        }
+    }
+    (hi[0] - lo[0]).max(side) * (hi[1] - lo[1]).max(side)
+}
+
 /// ln of the local density of detections per mas^2 and mag at each detection: the distance of
 /// the k-th neighbour, and the spread of the list's magnitudes around its own.
-fn densities(s: &Sight) -> Vec<f64> {
+fn densities(s: &Sight, area: f64) -> Vec<f64> {
     let n = s.data.len();
     if n == 0 {
         return Vec::new();
     }
-    let area = s.data.region.area_mas2().unwrap_or_else(|| {
-        let span = |v: &[f64]| {
-            let (lo, hi) = v.iter().fold((f64::INFINITY, f64::NEG_INFINITY), |a, &b| {
-                (a.0.min(b), a.1.max(b))
-            });
-            (hi - lo).max(s.data.fwhm_mas)
-        };
-        span(&s.data.x_mas) * span(&s.data.y_mas)
-    });
     let mean = n as f64 / area.max(1.0);
     let k = 12.min(n - 1);
     let mut order: Vec<u32> = (0..n as u32)

@@ -2,7 +2,9 @@
 
 use rayon::prelude::*;
 
+use super::estimate;
 use super::observer::Observer;
+use crate::maths::assign::{Edges, Solver};
 use crate::resolve::grow::{self, Scratch};
 use crate::resolve::joint;
 use crate::resolve::scene::Scene;
@@ -10,9 +12,9 @@ use crate::resolve::star::{Cell, Star};
 use crate::resolve::work::{self, Desk, Work};
 
 /// Evidence a new track must bring \[nats\].
-pub const BIRTH_NATS: f64 = 6.0;
+pub const BIRTH_NATS: f64 = 4.0;
 /// Evidence below which a track dies \[nats\].
-pub const DEATH_NATS: f64 = 3.0;
+pub const DEATH_NATS: f64 = 2.0;
 
 /// Refit all stars to their clean detections and predict every epoch afresh.
 pub fn refresh(scene: &Scene, work: &mut Work) {
@@ -82,45 +84,135 @@ pub fn compact(scene: &Scene, work: &mut Work, keep: impl Fn(usize, &Star) -> bo
         .collect();
 }
 
+/// How often each detection has been an anchor: after two failures it is left alone.
+#[derive(Debug)]
+pub struct Tried(Vec<Vec<u8>>);
+
+impl Tried {
+    #[must_use]
+    pub fn new(scene: &Scene) -> Self {
+        Self(scene.sights.iter().map(|s| vec![0; s.len()]).collect())
+    }
+    fn of(&self, e: usize, d: usize) -> u8 {
+        self.0[e][d]
+    }
+    fn add(&mut self, e: usize, d: usize) {
+        self.0[e][d] = self.0[e][d].saturating_add(1);
+    }
+}
+
 /// Births from free detections, brightest first.
-pub fn births(scene: &Scene, work: &mut Work) -> usize {
+pub fn births(scene: &Scene, work: &mut Work, joint: bool, tried: &mut Tried) -> (usize, usize) {
     let mut anchors: Vec<(f64, usize, u32)> = Vec::new();
     for (e, s) in scene.sights.iter().enumerate() {
         if s.sensor.targeted {
             continue;
         }
         for d in 0..s.len() {
-            if work.desks[e].groups[d].is_empty() {
+            if work.desks[e].groups[d].is_empty() && tried.of(e, d) < 2 {
                 let m = if s.mag[d].is_finite() { s.mag[d] } else { 99.0 };
                 anchors.push((m, e, d as u32));
             }
         }
     }
     anchors.sort_by(|a, b| a.0.total_cmp(&b.0).then((a.1, a.2).cmp(&(b.1, b.2))));
-    let mut sc = Scratch::default();
+    let mut queue: std::collections::VecDeque<(usize, u32)> =
+        anchors.into_iter().map(|a| (a.1, a.2)).collect();
     let mut born = 0;
-    for (_, e, d) in anchors {
-        if !work.desks[e].groups[d as usize].is_empty() {
-            continue;
-        }
-        if let Some(draft) = propose(scene, work, e, d, &mut sc)
-            && draft.worth > BIRTH_NATS
-        {
+    let mut twins = 0;
+    let mut sc = Scratch::default();
+    while !queue.is_empty() {
+        let batch = next_batch(scene, work, &mut queue);
+        let frozen = &*work;
+        let drafts: Vec<Option<grow::Draft>> = batch
+            .par_iter()
+            .map_init(Scratch::default, |sc, &(e, d)| {
+                propose(scene, frozen, e, d, sc)
+            })
+            .collect();
+        let before = work.stars.len();
+        for (draft, &(e, d)) in drafts.into_iter().zip(&batch) {
+            tried.add(e, d as usize);
+            let Some(draft) = draft else { continue };
+            let least = BIRTH_NATS;
+            if draft.worth <= least {
+                if joint
+                    && work.desks[e].groups[d as usize].is_empty()
+                    && grow::joint_birth(scene, work, &draft, least, &mut sc).is_some()
+                {
+                    born += 1;
+                    twins += 1;
+                }
+                continue;
+            }
+            let clash = work.stars[before..].iter().any(|s| {
+                s.cells
+                    .iter()
+                    .zip(&draft.star.cells)
+                    .any(|(a, b)| a.detection().is_some() && a.detection() == b.detection())
+            });
+            if clash {
+                // Another birth of this batch took what it wanted: try again with that known.
+                queue.push_front((e, d));
+                continue;
+            }
             work.add(scene, draft.star);
             born += 1;
         }
     }
-    born
+    (born, twins)
+}
+
+/// Anchors of one batch.
+const BATCH: usize = 48;
+/// How far down the queue a batch may look.
+const LOOK: usize = 1500;
+
+/// The next anchors, far enough apart not to be the same star; taken from the queue.
+fn next_batch(
+    scene: &Scene,
+    work: &Work,
+    queue: &mut std::collections::VecDeque<(usize, u32)>,
+) -> Vec<(usize, u32)> {
+    let mut batch: Vec<(usize, u32)> = Vec::with_capacity(BATCH);
+    let mut later = Vec::new();
+    let mut looked = 0;
+    while let Some((e, d)) = queue.pop_front() {
+        if !work.desks[e].groups[d as usize].is_empty() {
+            continue;
+        }
+        looked += 1;
+        let s = &scene.sights[e];
+        let (x, y) = (s.data.x_mas[d as usize], s.data.y_mas[d as usize]);
+        let apart = batch.iter().all(|&(f, q)| {
+            let o = &scene.sights[f];
+            let reach = 4.0 * s.sensor.fwhm_mas
+                + 2.0 * scene.dynamics.speed_mas_yr(x, y, s.t_yr) * (s.t_yr - o.t_yr).abs();
+            (o.data.x_mas[q as usize] - x).hypot(o.data.y_mas[q as usize] - y) > reach
+        });
+        if apart {
+            batch.push((e, d));
+        } else {
+            later.push((e, d));
+        }
+        if batch.len() == BATCH || looked == LOOK {
+            break;
+        }
+    }
+    for a in later.into_iter().rev() {
+        queue.push_front(a);
+    }
+    batch
 }
 
 /// Best growth from an anchor over several partner detections.
 fn propose(scene: &Scene, work: &Work, e: usize, d: u32, sc: &mut Scratch) -> Option<grow::Draft> {
-    let mut best = grow::grow(scene, work, &[(e, d)], -12.0, sc);
+    let mut best = grow::grow(scene, work, &[(e, d)], -12.0, None, sc);
     if best.as_ref().is_some_and(|b| b.worth > 60.0) {
         return best;
     }
-    for seed in partners(scene, work, e, d) {
-        if let Some(g) = grow::grow(scene, work, &[(e, d), seed], -12.0, sc)
+    for seed in partners(scene, work, e, d, 4) {
+        if let Some(g) = grow::grow(scene, work, &[(e, d), seed], -12.0, None, sc)
             && best.as_ref().is_none_or(|b| g.worth > b.worth)
         {
             best = Some(g);
@@ -130,7 +222,7 @@ fn propose(scene: &Scene, work: &Work, e: usize, d: u32, sc: &mut Scratch) -> Op
 }
 
 /// Free detections of like magnitude at other epochs that could be the same star.
-fn partners(scene: &Scene, work: &Work, e: usize, d: u32) -> Vec<(usize, u32)> {
+fn partners(scene: &Scene, work: &Work, e: usize, d: u32, most: usize) -> Vec<(usize, u32)> {
     let s = &scene.sights[e];
     let (x, y, m) = (
         s.data.x_mas[d as usize],
@@ -145,12 +237,17 @@ fn partners(scene: &Scene, work: &Work, e: usize, d: u32) -> Vec<(usize, u32)> {
     for &f in &scene.by_time[lo..=hi] {
         let o = &scene.sights[f];
         let dt = (o.t_yr - s.t_yr).abs();
-        if f == e || dt > 4.0 {
+        if f == e || (dt > 6.0 && scene.by_time.len() > 12) {
             continue;
         }
         let sigma = scene.dynamics.speed_mas_yr(x, y, s.t_yr);
         let top = scene.dynamics.top_speed_mas_yr(x, y, s.t_yr);
-        let reach = (3.0 * sigma).min(top) * dt
+        // Far enough for fast stars where the field is empty; where it is full, only as far as
+        // chance neighbours of like magnitude stay few.
+        let per_mas2 = s.ln_star[d as usize].exp().max(1e-30);
+        let quiet = (1.5 / (std::f64::consts::PI * per_mas2)).sqrt();
+        let far = ((3.0 * sigma).min(top) * dt).max((top * dt).min(quiet));
+        let reach = far
             + 3.0 * (s.data.cov_mas2[d as usize].max_var() + 4.0).sqrt()
             + 0.1 * s.sensor.fwhm_mas;
         o.tree.within(x, y, reach, &mut hits);
@@ -164,88 +261,195 @@ fn partners(scene: &Scene, work: &Work, e: usize, d: u32) -> Vec<(usize, u32)> {
             } else {
                 1.0
             };
-            if z2 > 12.0 {
+            if z2 > 60.0 {
                 continue;
             }
             let spread = sigma * sigma * dt * dt + 25.0;
-            let score = -0.5 * (h.dist_mas.powi(2) / spread + z2)
-                - spread.ln()
-                - if dt < 0.3 { 2.0 } else { 0.0 };
+            let z2 = z2.min(6.0 + 0.15 * z2);
+            let q2 = h.dist_mas.powi(2) / spread;
+            let q2 = q2.min(8.0 + 0.05 * q2);
+            let score = -0.5 * (q2 + z2) - spread.ln() - if dt < 0.3 { 2.0 } else { 0.0 };
             found.push((score, f, h.row));
         }
     }
     found.sort_by(|a, b| b.0.total_cmp(&a.0).then((a.1, a.2).cmp(&(b.1, b.2))));
-    found.truncate(4);
+    found.truncate(most);
     found.into_iter().map(|f| (f.1, f.2)).collect()
 }
 
-/// Serial revision: weak stars die or are regrown from their own clean detections.
+/// What became of a weak star when it was looked at again.
+enum Verdict {
+    Kept,
+    Regrown(Box<Star>),
+    Dead,
+}
+
+/// Revision: weak stars die or are regrown from their own clean detections. Stars are judged
+/// in batches of such as lie far apart, so that no verdict rests on a neighbour judged at the
+/// same time (two copies of a doubled star must not both die).
 pub fn revise(scene: &Scene, work: &mut Work) -> (usize, usize) {
-    let mut sc = Scratch::default();
-    let mut order: Vec<(f64, u32)> = Vec::with_capacity(work.stars.len());
-    for k in 0..work.stars.len() as u32 {
-        let star = work.stars[k as usize].clone();
-        let w = grow::worth(scene, work, &star, Some(k), &mut sc);
-        work.stars[k as usize].worth = w;
-        order.push((w, k));
-    }
-    order.sort_by(|a, b| a.0.total_cmp(&b.0).then(a.1.cmp(&b.1)));
+    let worths: Vec<f64> = {
+        let frozen = &*work;
+        (0..work.stars.len() as u32)
+            .into_par_iter()
+            .map_init(Scratch::default, |sc, k| death_worth(scene, frozen, k, sc))
+            .collect()
+    };
+    let mut order: Vec<u32> = (0..work.stars.len() as u32).collect();
+    order.sort_by(|&a, &b| {
+        worths[a as usize]
+            .total_cmp(&worths[b as usize])
+            .then(a.cmp(&b))
+    });
+    let mut queue: std::collections::VecDeque<u32> = order.into();
     let (mut died, mut regrown) = (0, 0);
     let mut dead = vec![false; work.stars.len()];
-    for (_, k) in order {
-        let old = work.stars[k as usize].clone();
-        let alone: Vec<(usize, u32)> = old
-            .cells
-            .iter()
-            .enumerate()
-            .filter_map(|(e, c)| {
-                if let Cell::Alone(d) = *c {
-                    Some((e, d))
-                } else {
-                    None
-                }
-            })
+    while !queue.is_empty() {
+        let batch = far_apart(scene, work, &mut queue);
+        let frozen = &*work;
+        let verdicts: Vec<Verdict> = batch
+            .par_iter()
+            .map_init(Scratch::default, |sc, &k| judge(scene, frozen, k, sc))
             .collect();
-        let holes = old
-            .cells
-            .iter()
-            .filter(|c| matches!(c, Cell::Missed))
-            .count();
-        let w = grow::worth(scene, work, &old, Some(k), &mut sc);
-        if w > 40.0 && holes * 5 < alone.len() {
-            continue;
-        }
-        work.withdraw(k);
-        let mut best: Option<(f64, Star)> = None;
-        if alone.len() >= 2 {
-            let n = alone.len();
-            for i in [n / 2, n / 6, n - 1 - n / 6] {
-                let j = if i + 1 < n { i + 1 } else { i - 1 };
-                if let Some(g) = grow::grow(scene, work, &[alone[i], alone[j]], -25.0, &mut sc)
-                    && best.as_ref().is_none_or(|b| g.worth > b.0)
-                {
-                    best = Some((g.worth, g.star));
+        for (verdict, &k) in verdicts.into_iter().zip(&batch) {
+            match verdict {
+                Verdict::Kept => {}
+                Verdict::Regrown(star) => {
+                    regrown += 1;
+                    work.withdraw(k);
+                    work.replace(scene, k, *star);
                 }
-            }
-        }
-        let keep = match best {
-            Some((bw, star)) if bw > w + 1.0 && bw > DEATH_NATS => {
-                regrown += 1;
-                Some(star)
-            }
-            _ if w > DEATH_NATS && alone.len() >= 2 => Some(old),
-            _ => None,
-        };
-        match keep {
-            Some(star) => work.replace(scene, k, star),
-            None => {
-                dead[k as usize] = true;
-                died += 1;
+                Verdict::Dead => {
+                    died += 1;
+                    dead[k as usize] = true;
+                    work.withdraw(k);
+                }
             }
         }
     }
     compact(scene, work, |k, _| !dead[k]);
     (died, regrown)
+}
+
+fn death_worth(scene: &Scene, work: &Work, k: u32, sc: &mut Scratch) -> f64 {
+    grow::worth(scene, work, &work.stars[k as usize], Some(k), sc).hopeful(8.0)
+}
+
+fn judge(scene: &Scene, work: &Work, k: u32, sc: &mut Scratch) -> Verdict {
+    let old = &work.stars[k as usize];
+    let alone: Vec<(usize, u32)> = old
+        .cells
+        .iter()
+        .enumerate()
+        .filter_map(|(e, c)| {
+            if let Cell::Alone(d) = *c {
+                Some((e, d))
+            } else {
+                None
+            }
+        })
+        .collect();
+    let holes = old
+        .cells
+        .iter()
+        .filter(|c| matches!(c, Cell::Missed))
+        .count();
+    let w = death_worth(scene, work, k, sc);
+    if w > 40.0 && holes * 5 < alone.len() {
+        return Verdict::Kept;
+    }
+    let mut best: Option<(f64, Star)> = None;
+    if alone.len() >= 2 {
+        let n = alone.len();
+        for i in [n / 2, n / 6, n - 1 - n / 6] {
+            let j = if i + 1 < n { i + 1 } else { i - 1 };
+            if let Some(g) = grow::grow(scene, work, &[alone[i], alone[j]], -25.0, Some(k), sc)
+                && best.as_ref().is_none_or(|b| g.worth > b.0)
+            {
+                best = Some((g.worth, g.star));
+            }
+        }
+    }
+    let least = DEATH_NATS;
+    match best {
+        Some((bw, star)) if bw > w + 1.0 && bw > least => Verdict::Regrown(Box::new(star)),
+        _ if w > least && alone.len() >= 2 => Verdict::Kept,
+        _ => Verdict::Dead,
+    }
+}
+
+/// The next stars, no two of which come near each other at any epoch.
+fn far_apart(scene: &Scene, work: &Work, queue: &mut std::collections::VecDeque<u32>) -> Vec<u32> {
+    let mut batch: Vec<u32> = Vec::with_capacity(BATCH);
+    let mut later = Vec::new();
+    let mut looked = 0;
+    while let Some(k) = queue.pop_front() {
+        looked += 1;
+        let free = batch.iter().all(|&q| {
+            work.desks.iter().zip(&scene.sights).all(|(desk, s)| {
+                let (a, b) = (&desk.preds[k as usize], &desk.preds[q as usize]);
+                !a.active || !b.active || (a.x - b.x).hypot(a.y - b.y) > 4.0 * s.sensor.fwhm_mas
+            })
+        });
+        if free {
+            batch.push(k);
+        } else {
+            later.push(k);
+        }
+        if batch.len() == BATCH || looked == LOOK {
+            break;
+        }
+    }
+    for k in later.into_iter().rev() {
+        queue.push_front(k);
+    }
+    batch
+}
+
+/// Campaigns of so few epochs begin with an assignment of pairs.
+const FEW_EPOCHS: usize = 3;
+
+/// First tracks of a campaign of two or three epochs: between its first two epochs the set of
+/// pairs with the largest total evidence (an assignment). With so little to hold a track
+/// together, taking the best pair first would let one star rob the next of its partner.
+fn pair_births(scene: &Scene, work: &mut Work) {
+    let &[first, second, ..] = scene.by_time.as_slice() else {
+        return;
+    };
+    let frozen = &*work;
+    let drafts: Vec<Vec<(u32, grow::Draft)>> = (0..scene.sights[first].len() as u32)
+        .into_par_iter()
+        .map_init(Scratch::default, |sc, d| {
+            partners(scene, frozen, first, d, 8)
+                .into_iter()
+                .filter(|&(e, _)| e == second)
+                .filter_map(|(e, q)| {
+                    grow::grow(scene, frozen, &[(first, d), (e, q)], -25.0, None, sc)
+                        .filter(|g| g.worth > BIRTH_NATS && g.star.cells[e] == Cell::Alone(q))
+                        .map(|g| (q, g))
+                })
+                .collect()
+        })
+        .collect();
+    let mut starts = vec![0u32];
+    let (mut to, mut cost) = (Vec::new(), Vec::new());
+    for row in &drafts {
+        to.extend(row.iter().map(|x| x.0));
+        cost.extend(row.iter().map(|x| x.1.worth));
+        starts.push(to.len() as u32);
+    }
+    let mut solver = Solver::default();
+    solver.max_weight(Edges {
+        n_right: scene.sights[second].len(),
+        first: &starts,
+        to: &to,
+        cost: &cost,
+    });
+    for (row, &mate) in drafts.iter().zip(solver.right_of_left()) {
+        if let Some((_, g)) = row.iter().find(|x| x.0 == mate) {
+            work.add(scene, g.star.clone());
+        }
+    }
 }
 
 /// Rounds of the scheme.
@@ -254,8 +458,12 @@ const ROUNDS: usize = 4;
 /// The whole search.
 pub fn run(scene: &mut Scene, observer: &dyn Observer) -> Work {
     let mut work = Work::empty(scene);
+    let mut tried = Tried::new(scene);
+    if scene.sights.len() <= FEW_EPOCHS {
+        pair_births(scene, &mut work);
+    }
     observer.stage("first tracks", None);
-    births(scene, &mut work);
+    births(scene, &mut work, false, &mut tried);
     for round in 0..ROUNDS {
         observer.stage("assigning", Some((ROUNDS - round) as u64));
         for _ in 0..2 {
@@ -263,10 +471,11 @@ pub fn run(scene: &mut Scene, observer: &dyn Observer) -> Work {
             assign(scene, &mut work);
         }
         refresh(scene, &mut work);
+        estimate::laws(scene, &work);
         observer.stage("revising", None);
         revise(scene, &mut work);
         observer.stage("births", None);
-        births(scene, &mut work);
+        births(scene, &mut work, true, &mut tried);
     }
     for _ in 0..2 {
         refresh(scene, &mut work);

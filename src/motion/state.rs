@@ -23,6 +23,14 @@ pub const CUSP_GAMMA: f64 = 1.75;
 /// C = Gamma(7/8) / (sqrt(pi) Gamma(3/8)) = 0.2594.
 const LN_CUSP_NORM: f64 = -1.349_4;
 
+/// A second, wide component of the velocity prior: a single Gaussian would reject exactly the
+/// fast stars.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct Wide {
+    pub fraction: f64,
+    pub speed_mas_yr: f64,
+}
+
 /// How stars of this field move.
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub enum Dynamics {
@@ -40,6 +48,8 @@ pub enum Dynamics {
     Free {
         speed_mas_yr: f64,
         accel_mas_yr2: f64,
+        /// Fast component of the velocity prior.
+        wide: Wide,
     },
 }
 
@@ -128,20 +138,8 @@ impl Dynamics {
             Self::Free {
                 speed_mas_yr,
                 accel_mas_yr2,
-            } => {
-                let (iv, ia) = (speed_mas_yr.powi(-2), accel_mas_yr2.powi(-2));
-                let mut grad = P6::zeros();
-                let mut curv = M6::zeros();
-                let mut ln = -2.0 * (2.0 * std::f64::consts::PI).ln()
-                    - 2.0 * speed_mas_yr.ln()
-                    - 2.0 * accel_mas_yr2.ln();
-                for (k, w) in [(2, iv), (3, iv), (4, ia), (5, ia)] {
-                    grad[k] = -w * p[k];
-                    curv[(k, k)] = w;
-                    ln -= 0.5 * w * p[k] * p[k];
-                }
-                Prior { ln, grad, curv }
-            }
+                wide,
+            } => free_prior(speed_mas_yr, accel_mas_yr2, wide, p),
         }
     }
 
@@ -154,7 +152,9 @@ impl Dynamics {
                 let r = (x_mas - cx).hypot(y_mas - cy).max(10.0);
                 (2.0 * gm_mas3_yr2 / r).sqrt()
             }
-            Self::Free { speed_mas_yr, .. } => 4.5 * speed_mas_yr,
+            Self::Free {
+                speed_mas_yr, wide, ..
+            } => 4.0 * speed_mas_yr.max(wide.speed_mas_yr),
         }
     }
 
@@ -169,6 +169,36 @@ impl Dynamics {
             }
             Self::Free { speed_mas_yr, .. } => speed_mas_yr,
         }
+    }
+}
+
+/// Mixture of two Gaussians in velocity, one in acceleration. The curvature is that of the
+/// component mix at hand, which keeps Newton steps safe.
+fn free_prior(speed: f64, accel: f64, wide: Wide, p: &P6) -> Prior {
+    let v2 = p[2] * p[2] + p[3] * p[3];
+    let two_pi = 2.0 * std::f64::consts::PI;
+    let ln = |share: f64, sigma: f64| {
+        share.ln() - two_pi.ln() - 2.0 * sigma.ln() - 0.5 * v2 / (sigma * sigma)
+    };
+    let (core, far) = (
+        ln(1.0 - wide.fraction, speed),
+        ln(wide.fraction, wide.speed_mas_yr),
+    );
+    let total = crate::maths::lnprob::ln_add(core, far);
+    let w = (core - total).exp();
+    let iv = w / (speed * speed) + (1.0 - w) / (wide.speed_mas_yr * wide.speed_mas_yr);
+    let ia = accel.powi(-2);
+    let a2 = p[4] * p[4] + p[5] * p[5];
+    let mut grad = P6::zeros();
+    let mut curv = M6::zeros();
+    for (k, q) in [(2, iv), (3, iv), (4, ia), (5, ia)] {
+        grad[k] = -q * p[k];
+        curv[(k, k)] = q;
+    }
+    Prior {
+        ln: total - two_pi.ln() - 2.0 * accel.ln() - 0.5 * ia * a2,
+        grad,
+        curv,
     }
 }
 

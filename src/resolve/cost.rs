@@ -95,8 +95,11 @@ pub fn shared(s: &Sight, d: usize, preds: &[&Pred]) -> GroupFit {
         mag_var += w * w * p.mag_var;
         spread2 += w * ((p.x - b.x_mas).powi(2) + (p.y - b.y_mas).powi(2));
     }
-    // The blend's place is uncertain by a share of its own extent.
-    let model = sn.errors.blend_fwhm * sn.fwhm_mas + 0.15 * spread2.sqrt();
+    // The blend's place and light are uncertain as far as it is a blend at all: a companion
+    // with a few per cent of the light leaves the measurement of the main star as good as it was.
+    let main = out.share[..n].iter().copied().fold(0.0, f64::max);
+    let mixed = (3.0 * (1.0 - main)).min(1.0);
+    let model = mixed * (sn.errors.blend_fwhm * sn.fwhm_mas + 0.15 * spread2.sqrt());
     cov += Cov2::round(model * model);
     let chi2 = cov.chi2(e.x_mas[d] - b.x_mas, e.y_mas[d] - b.y_mas);
     if chi2 > GATE_CHI2 {
@@ -106,7 +109,7 @@ pub fn shared(s: &Sight, d: usize, preds: &[&Pred]) -> GroupFit {
     let mag = mag_of(b.flux);
     let contrast = preds.iter().map(|p| p.contrast).fold(0.0, f64::max);
     if s.mag[d].is_finite() {
-        let var = s.mag_var[d] + mag_var + sn.errors.blend_mag.powi(2);
+        let var = s.mag_var[d] + mag_var + (mixed * sn.errors.blend_mag).powi(2);
         g += ln_mag(s.mag[d] - mag, var);
         g += (sn.depth.alone(s.mag[d]) * contrast).max(1e-4).ln();
     } else {

@@ -184,14 +184,15 @@ fn predict(scene: &Scene, work: &Work, e: usize, star: &Star, own: Option<u32>) 
     p
 }
 
-/// Grow a track from seed detections (the first is the anchor). `own`: the slot being regrown
-/// (already withdrawn from the work).
+/// Grow a track from seed detections (the first is the anchor). `own`: the star being regrown;
+/// what it holds counts as free.
 #[must_use]
 pub fn grow(
     scene: &Scene,
     work: &Work,
     seed: &[(usize, u32)],
     floor: f64,
+    own: Option<u32>,
     sc: &mut Scratch,
 ) -> Option<Draft> {
     let (e0, d0) = seed[0];
@@ -234,11 +235,11 @@ pub fn grow(
     let order = std::mem::take(&mut sc.order);
     let mut n_clean = seed.len();
     for &e in &order {
-        let p = predict(scene, work, e, &star, None);
+        let p = predict(scene, work, e, &star, own);
         if !p.active {
             continue;
         }
-        let (cell, gain, lead) = choose(scene, work, e, &p, None, sc);
+        let (cell, gain, lead) = choose(scene, work, e, &p, own, sc);
         running += p.ln_miss + gain;
         if lead < 2.0 && gain > 0.0 && n_clean < 6 {
             // Undecided while little is known: leave this epoch for the second pass.
@@ -251,7 +252,7 @@ pub fn grow(
             n_clean += 1;
             if REFIT_AT.contains(&n_clean) {
                 work::clean_obs(scene, &star.cells, |_| 0.0, &mut sc.obs);
-                let wide = n_clean >= 4;
+                let wide = matches!(n_clean, 4 | 8 | 15 | 30);
                 if let Some(f) = best_fit(&scene.dynamics, &sc.obs, t0, &star.fit.p, wide) {
                     star.fit = f;
                 }
@@ -267,7 +268,7 @@ pub fn grow(
     if n_clean < 2 {
         return None;
     }
-    finish(scene, work, star, None, sc)
+    finish(scene, work, star, own, sc)
 }
 
 /// Magnitude of a growing star.
@@ -323,8 +324,9 @@ pub fn finish(
     }
     let t0 = star.fit.t0_yr;
     star.fit = state_fit::fit(&scene.dynamics, &sc.obs, t0, &star.fit.p, 20)?;
-    let worth = worth(scene, work, &star, own, sc);
-    star.worth = worth;
+    let parts = worth(scene, work, &star, own, sc);
+    let worth = parts.hopeful(3.0);
+    star.worth = parts.total();
     let n_alone = sc.obs.len();
     Some(Draft {
         star,
@@ -376,10 +378,34 @@ pub fn recentre(scene: &Scene, star: &mut Star) {
     star.fit.t0_yr = t;
 }
 
+/// Evidence of a star in two parts \[nats\].
+#[derive(Clone, Copy, Debug, Default, PartialEq)]
+pub struct Worth {
+    /// From the detections it has alone, and from its misses.
+    pub lone: f64,
+    /// From being close to others: merged with them, or apart against the odds.
+    pub group: f64,
+}
+
+impl Worth {
+    #[must_use]
+    pub fn total(self) -> f64 {
+        self.lone + self.group
+    }
+
+    /// Total with the loss through others limited: they may have absorbed its light and will
+    /// give it up once it exists.
+    #[must_use]
+    pub fn hopeful(self, most_loss: f64) -> f64 {
+        self.lone + self.group.max(-most_loss)
+    }
+}
+
 /// Evidence of a star with everybody else fixed \[nats\]: how much better the lists are
 /// explained with it than without it.
 #[must_use]
-pub fn worth(scene: &Scene, work: &Work, star: &Star, own: Option<u32>, sc: &mut Scratch) -> f64 {
+pub fn worth(scene: &Scene, work: &Work, star: &Star, own: Option<u32>, sc: &mut Scratch) -> Worth {
+    let mut parts = [0.0; 6];
     let mut total = star.fit.ln_evidence;
     let mut ln_star = 0.0;
     let mut n = 0.0;
@@ -396,9 +422,11 @@ pub fn worth(scene: &Scene, work: &Work, star: &Star, own: Option<u32>, sc: &mut
         for &q in &sc.near {
             if Some(q) != own {
                 total += cost::ln_apart(s, &p, &desk.preds[q as usize]);
+                parts[0] += cost::ln_apart(s, &p, &desk.preds[q as usize]);
             }
         }
         total += p.ln_miss;
+        parts[1] += p.ln_miss;
         match *cell {
             Cell::Alone(d) => {
                 let d = d as usize;
@@ -430,6 +458,7 @@ pub fn worth(scene: &Scene, work: &Work, star: &Star, own: Option<u32>, sc: &mut
                     cost::shared(s, d as usize, &ps[..=m]).gain
                 };
                 total += (with - without).max(-30.0);
+                parts[3] += (with - without).max(-30.0);
             }
             Cell::Missed | Cell::Out => {}
         }
@@ -439,6 +468,103 @@ pub fn worth(scene: &Scene, work: &Work, star: &Star, own: Option<u32>, sc: &mut
     }
     if let Some((_, _, ln)) = work::magnitude(scene, &star.cells, |_| 1.0) {
         total += ln;
+        parts[4] = ln;
     }
-    total
+    let group = parts[0] + parts[3];
+    Worth {
+        lone: total - group,
+        group,
+    }
+}
+
+/// The star whose closeness costs a draft most: (its number, ln cost over all epochs).
+#[must_use]
+pub fn presser(scene: &Scene, work: &Work, star: &Star, sc: &mut Scratch) -> Option<(u32, f64)> {
+    let mut cost: Vec<(u32, f64)> = Vec::new();
+    for e in 0..scene.sights.len() {
+        let s = &scene.sights[e];
+        let desk = &work.desks[e];
+        let p = predict(scene, work, e, star, None);
+        if !p.active {
+            continue;
+        }
+        let reach = s.sensor.pairs.reach_fwhm() * s.sensor.fwhm_mas;
+        desk.grid.within(&desk.preds, p.x, p.y, reach, &mut sc.near);
+        for &q in &sc.near {
+            let c = cost::ln_apart(s, &p, &desk.preds[q as usize]);
+            match cost.iter_mut().find(|x| x.0 == q) {
+                Some(x) => x.1 += c,
+                None => cost.push((q, c)),
+            }
+        }
+    }
+    cost.into_iter()
+        .min_by(|a, b| a.1.total_cmp(&b.1).then(a.0.cmp(&b.0)))
+}
+
+/// Joint birth: the draft is born together with a revision of the star that has absorbed its
+/// light. That star gives up, for its own fit, every detection in which the two would be one;
+/// both are then fitted again. Kept when the two together explain more than the one did.
+///
+/// Leaves `work` as it was when it returns `None`.
+pub fn joint_birth(
+    scene: &Scene,
+    work: &mut Work,
+    draft: &Draft,
+    least: f64,
+    sc: &mut Scratch,
+) -> Option<f64> {
+    let (a, apart) = presser(scene, work, &draft.star, sc)?;
+    if draft.worth - apart < least {
+        return None;
+    }
+    let old = work.stars[a as usize].clone();
+    let before = worth(scene, work, &old, Some(a), sc).total();
+    let mut changed = old.clone();
+    let mut given = 0;
+    for e in 0..scene.sights.len() {
+        let Cell::Alone(d) = old.cells[e] else {
+            continue;
+        };
+        let p = predict(scene, work, e, &draft.star, None);
+        if !p.active {
+            continue;
+        }
+        let q = &work.desks[e].preds[a as usize];
+        if cost::ln_apart(&scene.sights[e], &p, q) < -0.4 {
+            changed.cells[e] = Cell::Shared(d);
+            given += 1;
+        }
+    }
+    let left = changed
+        .cells
+        .iter()
+        .filter(|c| matches!(c, Cell::Alone(_)))
+        .count();
+    if given == 0 || left < 2 {
+        return None;
+    }
+    recentre(scene, &mut changed);
+    if !work::refit(scene, &mut changed, |_| 0.0, |_| 1.0, 20) {
+        return None;
+    }
+    let undo = |work: &mut Work, old: Star| {
+        work.withdraw(a);
+        work.replace(scene, a, old);
+    };
+    work.withdraw(a);
+    let after_a = worth(scene, work, &changed, Some(a), sc).total();
+    work.replace(scene, a, changed);
+    let grown = finish(scene, work, draft.star.clone(), None, sc);
+    match grown {
+        Some(g) if g.n_alone >= 2 && g.worth > least && after_a + g.worth > before + least => {
+            let total = after_a + g.worth - before;
+            work.add(scene, g.star);
+            Some(total)
+        }
+        _ => {
+            undo(work, old);
+            None
+        }
+    }
 }

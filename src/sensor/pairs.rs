@@ -19,6 +19,9 @@ pub struct PairLaw {
 /// Highest and lowest chance: no outcome is impossible.
 const TOP: f64 = 0.985;
 const BOTTOM: f64 = 1e-5;
+/// The same for companions four or more magnitudes fainter: they may be lost in the glare
+/// without being part of what is measured.
+const TOP_FAINT: f64 = 0.75;
 
 impl PairLaw {
     /// Start, before anything is known of an instrument.
@@ -35,7 +38,8 @@ impl PairLaw {
     #[must_use]
     pub fn merged(&self, sep_fwhm: f64, dmag: f64) -> f64 {
         let limit = self.limit_fwhm + self.slope_fwhm * dmag.abs().min(6.0);
-        (TOP * logistic((limit - sep_fwhm) / self.width_fwhm)).max(BOTTOM)
+        let top = TOP - (TOP - TOP_FAINT) * ((dmag.abs() - 1.5) / 2.5).clamp(0.0, 1.0);
+        (top * logistic((limit - sep_fwhm) / self.width_fwhm)).max(BOTTOM)
     }
 
     /// Separation \[fwhm\] beyond which merging can be ignored.
@@ -64,10 +68,9 @@ pub fn refit(start: PairLaw, events: &[PairEvent]) -> PairLaw {
                 if e.merged { p.ln() } else { (1.0 - p).ln() }
             })
             .sum();
-        let a = (l.limit_fwhm - start.limit_fwhm) / 0.25;
-        let b = (l.slope_fwhm - start.slope_fwhm) / 0.05;
+        let a = (l.limit_fwhm - start.limit_fwhm) / 0.12;
         let c = (l.width_fwhm / start.width_fwhm).ln() / 0.5;
-        ln - 0.5 * (a * a + b * b + c * c)
+        ln - 0.5 * (a * a + c * c)
     };
     let mut best = (score(&start), start);
     let mut step = 1.0;
@@ -76,18 +79,8 @@ pub fn refit(start: PairLaw, events: &[PairEvent]) -> PairLaw {
             let o = best.1;
             for k in -3i32..=3 {
                 let t = PairLaw {
-                    limit_fwhm: (o.limit_fwhm + 0.1 * step * f64::from(k)).clamp(0.15, 2.0),
-                    ..best.1
-                };
-                let s = score(&t);
-                if s > best.0 {
-                    best = (s, t);
-                }
-            }
-            let o = best.1;
-            for k in -3i32..=3 {
-                let t = PairLaw {
-                    slope_fwhm: (o.slope_fwhm + 0.03 * step * f64::from(k)).clamp(0.0, 0.35),
+                    limit_fwhm: (o.limit_fwhm + 0.1 * step * f64::from(k))
+                        .clamp(start.limit_fwhm - 0.15, start.limit_fwhm + 0.15),
                     ..best.1
                 };
                 let s = score(&t);

@@ -17,7 +17,7 @@ use super::proof::Proved;
 use super::{flags, rivals, summary};
 
 /// Shares below this are not listed: the star has no part in the light that could be checked.
-pub const LEAST_SHARE: f64 = 0.08;
+pub const LEAST_SHARE: f64 = 0.06;
 /// Probability below which a membership counts as in doubt.
 pub const DOUBT: f64 = 0.9;
 
@@ -147,7 +147,8 @@ fn memberships(parts: &Parts) -> Vec<Member> {
             let listed = (0..n).filter(|&i| flux[i] / total >= LEAST_SHARE).count();
             for (i, &k) in stars.iter().enumerate() {
                 let part = flux[i] / total;
-                if part < LEAST_SHARE {
+                let far = (xy[i][0] - b.x_mas).hypot(xy[i][1] - b.y_mas) / s.sensor.fwhm_mas;
+                if n > 1 && (part < LEAST_SHARE || far > 0.8) {
                     continue;
                 }
                 let k = k as usize;

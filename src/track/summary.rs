@@ -7,7 +7,7 @@ use crate::model::motion::{Motion, MotionKind};
 use crate::model::result::{OrbitColumns, SkyMotion};
 use crate::motion::kepler;
 use crate::motion::orbit_columns::{Centre, orbit_columns};
-use crate::motion::state::{Dynamics, H26, M6, P6};
+use crate::motion::state::{Dynamics, H26, M6, P6, Wide};
 use crate::motion::state_fit::{self, Fit, Obs};
 
 /// Significance at which an acceleration is worth its own model \[sigma\].
@@ -65,6 +65,10 @@ pub fn summarise(dynamics: &Dynamics, fit: &Fit, obs: &[Obs], t_ref: f64) -> Sum
     let line = Dynamics::Free {
         speed_mas_yr: speed,
         accel_mas_yr2: 1e-7,
+        wide: Wide {
+            fraction: 0.02,
+            speed_mas_yr: 10.0 * speed,
+        },
     };
     let start = P6::new(
         full.sky.p[0],

@@ -1,0 +1,290 @@
+//! Estimates the observing laws from the tracks of the moment.
+//!
+//! Every estimate is a robust statistic of residuals predicted without the detection itself,
+//! shrunk towards the wide defaults: with few tracks or epochs the defaults stay.
+
+use rayon::prelude::*;
+
+use crate::maths::order;
+use crate::resolve::scene::Scene;
+use crate::resolve::star::Cell;
+use crate::resolve::work::Work;
+use crate::sensor::blend::{self, flux_of, mag_of};
+use crate::sensor::depth::{self, Depth, Event};
+use crate::sensor::errors::ErrorLaw;
+use crate::sensor::falses::FalseLaw;
+use crate::sensor::pairs::{self, PairEvent, PairLaw};
+
+use super::prepare::apply_laws;
+
+/// Weight of a default, in residuals.
+const DEFAULT_WEIGHT: f64 = 60.0;
+/// Median of a chi-square with two degrees of freedom, 2 ln 2.
+const MEDIAN_CHI2_2: f64 = 1.386_294_361_119_891;
+
+/// A clean detection of a well-known star.
+struct Clean {
+    /// Chi-square of the position over believed errors and prediction.
+    chi2: f64,
+    /// Share of the stated error in the believed variance.
+    stated: f64,
+    bright: bool,
+    press: f64,
+    dmag: f64,
+    mag_var: f64,
+}
+
+/// A blend of known stars.
+struct Mixed {
+    chi2: f64,
+    dmag: f64,
+    var: f64,
+}
+
+#[derive(Default)]
+struct Harvest {
+    clean: Vec<Clean>,
+    mixed: Vec<Mixed>,
+    pairs: Vec<PairEvent>,
+    depth: Vec<Event>,
+    free: usize,
+    total: usize,
+}
+
+/// Re-estimate all laws and recompute what depends on them.
+pub fn laws(scene: &mut Scene, work: &Work) {
+    let harvests: Vec<Harvest> = (0..scene.sights.len())
+        .into_par_iter()
+        .map(|e| harvest(scene, work, e))
+        .collect();
+    let n_instr = scene
+        .sights
+        .iter()
+        .map(|s| s.data.instrument + 1)
+        .max()
+        .unwrap_or(0);
+    for i in 0..n_instr {
+        let of: Vec<usize> = (0..scene.sights.len())
+            .filter(|&e| scene.sights[e].data.instrument == i)
+            .collect();
+        if of.is_empty() {
+            continue;
+        }
+        let all = |f: &dyn Fn(&Harvest) -> Vec<f64>| -> Vec<f64> {
+            of.iter().flat_map(|&e| f(&harvests[e])).collect()
+        };
+        let errors = error_law(
+            &scene.sights[of[0]].sensor.errors,
+            scene.sights[of[0]].sensor.fwhm_mas,
+            &all,
+        );
+        let events: Vec<PairEvent> = of
+            .iter()
+            .flat_map(|&e| harvests[e].pairs.iter().copied())
+            .collect();
+        let law = pairs::refit(PairLaw::start(), &events);
+        let free: usize = of.iter().map(|&e| harvests[e].free).sum();
+        let total: usize = of.iter().map(|&e| harvests[e].total).sum();
+        // Three parts default, one part leftovers: many of these are stars not yet found.
+        let start = FalseLaw::start().share;
+        let share = (0.75 * start + 0.25 * free as f64 / total.max(1) as f64)
+            .clamp(0.5 * start, 1.5 * start);
+        for &e in &of {
+            let s = &mut scene.sights[e];
+            s.sensor.errors = errors;
+            s.sensor.pairs = law;
+            s.sensor.falses.share = share;
+        }
+    }
+    scene
+        .sights
+        .par_iter_mut()
+        .zip(&harvests)
+        .for_each(|(s, h)| {
+            let start = Depth {
+                halo: s.sensor.depth.halo,
+                ..Depth::from_list(&s.mag)
+            };
+            s.sensor.depth = depth::refit(start, &h.depth);
+            let mut d: Vec<f64> = h
+                .clean
+                .iter()
+                .filter(|c| c.press < 0.1 && c.dmag.is_finite())
+                .map(|c| c.dmag)
+                .collect();
+            if let Some(m) = order::median(&mut d) {
+                let n = d.len() as f64;
+                s.sensor.zero_point_mag -= m * n / (n + 20.0);
+            }
+            apply_laws(s);
+        });
+}
+
+fn harvest(scene: &Scene, work: &Work, e: usize) -> Harvest {
+    let s = &scene.sights[e];
+    let desk = &work.desks[e];
+    let f = s.sensor.fwhm_mas;
+    let mut h = Harvest {
+        total: s.len(),
+        ..Harvest::default()
+    };
+    h.free = desk.groups.iter().filter(|g| g.is_empty()).count();
+    let mut near = Vec::new();
+    for (k, p) in desk.preds.iter().enumerate() {
+        if !p.active || p.cov.max_var().sqrt() > 0.12 * f || p.mag_var > 0.05 {
+            continue;
+        }
+        let cell = work.stars[k].cells[e];
+        if p.press < 0.15 && p.contrast > 0.9 {
+            match cell {
+                Cell::Alone(_) => h.depth.push(Event {
+                    mag: p.mag,
+                    seen: true,
+                }),
+                Cell::Missed => h.depth.push(Event {
+                    mag: p.mag,
+                    seen: false,
+                }),
+                _ => {}
+            }
+        }
+        if let Cell::Alone(d) = cell {
+            let d = d as usize;
+            let r = s.sensor.errors.position(s.data.cov_mas2[d], p.press, f);
+            let cov = p.cov + r;
+            let stated = s.data.cov_mas2[d].scaled(s.sensor.errors.factor.powi(2));
+            h.clean.push(Clean {
+                chi2: cov.chi2(s.data.x_mas[d] - p.x, s.data.y_mas[d] - p.y),
+                stated: (stated.xx + stated.yy) / (cov.xx + cov.yy),
+                bright: p.mag < s.sensor.depth.m50 - 2.5,
+                press: p.press,
+                dmag: s.mag[d] - p.mag,
+                mag_var: s.mag_var[d] + p.mag_var,
+            });
+        }
+        desk.grid.within(&desk.preds, p.x, p.y, 1.8 * f, &mut near);
+        for &q in near.iter().filter(|&&q| q as usize > k) {
+            let o = &desk.preds[q as usize];
+            if o.cov.max_var().sqrt() > 0.12 * f || o.mag_var > 0.05 {
+                continue;
+            }
+            let merged = match (cell, work.stars[q as usize].cells[e]) {
+                (Cell::Shared(a), Cell::Shared(b)) if a == b => true,
+                (a, b) if a.detection().is_some() && b.detection().is_some() => false,
+                _ => continue,
+            };
+            let dmag = p.mag - o.mag;
+            // Only the light of like stars tells whether they are one: a merger of others is
+            // believed because the law says so, and must not teach the law.
+            if dmag.abs() < 1.2 {
+                h.pairs.push(PairEvent {
+                    sep_fwhm: (p.x - o.x).hypot(p.y - o.y) / f,
+                    dmag,
+                    merged,
+                });
+            }
+        }
+    }
+    for (d, g) in desk.groups.iter().enumerate().filter(|(_, g)| g.len() >= 2) {
+        let preds: Vec<_> = g
+            .members()
+            .iter()
+            .map(|&k| &desk.preds[k as usize])
+            .collect();
+        if preds.iter().any(|p| p.cov.max_var().sqrt() > 0.12 * f) {
+            continue;
+        }
+        let xy: Vec<[f64; 2]> = preds.iter().map(|p| [p.x, p.y]).collect();
+        let flux: Vec<f64> = preds.iter().map(|p| flux_of(p.mag)).collect();
+        let mut w = vec![0.0; preds.len()];
+        let b = blend::place(s.sensor.blend, f, &xy, &flux, &mut w);
+        let mut cov = s.sensor.errors.position(s.data.cov_mas2[d], 0.0, f);
+        for (p, w) in preds.iter().zip(&w) {
+            cov += p.cov.scaled(w * w);
+        }
+        let extra = (s.sensor.errors.blend_fwhm * f).powi(2);
+        cov += crate::maths::cov2::Cov2::round(extra);
+        h.mixed.push(Mixed {
+            chi2: cov.chi2(s.data.x_mas[d] - b.x_mas, s.data.y_mas[d] - b.y_mas),
+            dmag: s.mag[d] - mag_of(b.flux),
+            var: s.mag_var[d],
+        });
+    }
+    h
+}
+
+/// Ratio by which a variance must change so that the median chi-square is right, shrunk to one.
+fn variance_ratio(chi2: &mut [f64]) -> f64 {
+    let n = chi2.len() as f64;
+    let Some(m) = order::median(chi2) else {
+        return 1.0;
+    };
+    ((m / MEDIAN_CHI2_2).ln() * n / (n + DEFAULT_WEIGHT)).exp()
+}
+
+fn error_law(
+    old: &ErrorLaw,
+    fwhm: f64,
+    all: &dyn Fn(&dyn Fn(&Harvest) -> Vec<f64>) -> Vec<f64>,
+) -> ErrorLaw {
+    let wide = ErrorLaw::wide(fwhm);
+    let mut law = *old;
+    // Where the stated error dominates it sets the factor; where it does not, the floor.
+    let mut by_stated = all(&|h| {
+        h.clean
+            .iter()
+            .filter(|c| c.press < 0.1 && c.stated > 0.5)
+            .map(|c| c.chi2)
+            .collect()
+    });
+    law.factor = (old.factor * variance_ratio(&mut by_stated).sqrt()).clamp(0.8, 3.0);
+    let mut by_floor = all(&|h| {
+        h.clean
+            .iter()
+            .filter(|c| c.press < 0.1 && c.bright && c.stated <= 0.5)
+            .map(|c| c.chi2)
+            .collect()
+    });
+    law.floor_mas =
+        (old.floor_mas * variance_ratio(&mut by_floor).sqrt()).clamp(0.004 * fwhm, 0.1 * fwhm);
+    let mut pressed = all(&|h| {
+        h.clean
+            .iter()
+            .filter(|c| c.press > 0.3)
+            .map(|c| c.chi2)
+            .collect()
+    });
+    law.press_fwhm = (old.press_fwhm * variance_ratio(&mut pressed).sqrt()).clamp(0.01, 0.2);
+    let mut mixed = all(&|h| h.mixed.iter().map(|c| c.chi2).collect());
+    law.blend_fwhm = (old.blend_fwhm * variance_ratio(&mut mixed).sqrt()).clamp(0.015, 0.15);
+    // Magnitudes: floor from bright ones, factor kept.
+    let mut dm = all(&|h| {
+        h.clean
+            .iter()
+            .filter(|c| c.press < 0.1 && c.dmag.is_finite())
+            .map(|c| c.dmag * c.dmag / c.mag_var)
+            .collect()
+    });
+    let n = dm.len() as f64;
+    if let Some(m) = order::median(&mut dm) {
+        // Median of a chi-square with one degree of freedom: 0.4549.
+        let ratio = ((m / 0.454_9).ln() * n / (n + DEFAULT_WEIGHT)).exp();
+        law.mag_floor = (old.mag_floor * ratio.sqrt()).clamp(0.03, 0.4);
+    }
+    let mut bm = all(&|h| {
+        h.mixed
+            .iter()
+            .filter(|c| c.dmag.is_finite())
+            .map(|c| c.dmag.abs())
+            .collect()
+    });
+    let n = bm.len() as f64;
+    if let Some(m) = order::median(&mut bm) {
+        let mut own = all(&|h| h.mixed.iter().map(|c| c.var).collect());
+        let own = order::median(&mut own).unwrap_or(0.0);
+        let extra = ((m / 0.674_5).powi(2) - own).max(0.0025).sqrt();
+        law.blend_mag =
+            ((extra * n + wide.blend_mag * DEFAULT_WEIGHT) / (n + DEFAULT_WEIGHT)).clamp(0.05, 0.5);
+    }
+    law
+}
