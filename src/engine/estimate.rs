@@ -222,11 +222,10 @@ fn variance_ratio(chi2: &mut [f64]) -> f64 {
     ((m / MEDIAN_CHI2_2).ln() * n / (n + DEFAULT_WEIGHT)).exp()
 }
 
-fn error_law(
-    old: &ErrorLaw,
-    fwhm: f64,
-    all: &dyn Fn(&dyn Fn(&Harvest) -> Vec<f64>) -> Vec<f64>,
-) -> ErrorLaw {
+/// Collects one number list from every harvest of an instrument.
+type Gather<'a> = &'a dyn Fn(&dyn Fn(&Harvest) -> Vec<f64>) -> Vec<f64>;
+
+fn error_law(old: &ErrorLaw, fwhm: f64, all: Gather<'_>) -> ErrorLaw {
     let wide = ErrorLaw::wide(fwhm);
     let mut law = *old;
     // Where the stated error dominates it sets the factor; where it does not, the floor.

@@ -156,7 +156,6 @@ pub fn beliefs(choices: &Choices, n_stars: usize, temperature: f64) -> Beliefs {
             }
         }
     }
-    out.list
-        .sort_by(|a, b| (a.detection, a.star).cmp(&(b.detection, b.star)));
+    out.list.sort_by_key(|b| (b.detection, b.star));
     out
 }

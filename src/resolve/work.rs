@@ -103,7 +103,7 @@ impl Work {
 pub fn predict(scene: &Scene, e: usize, star: &Star, press: f64) -> Pred {
     let s = &scene.sights[e];
     let ((mut x, mut y), mut cov) = star.fit.predict(&scene.dynamics, s.t_yr);
-    if !(x.is_finite() && y.is_finite() && cov.xx.is_finite()) || !s.data.region.contains(x, y) {
+    if !(x.is_finite() && y.is_finite() && cov.xx.is_finite() && s.data.region.contains(x, y)) {
         return Pred::NONE;
     }
     let (mut mag, mut mag_var) = (star.mag, star.mag_var);
