@@ -63,6 +63,10 @@ impl Progress {
 }
 
 impl State {
+    fn silent_for(&self, time: Duration) -> bool {
+        self.said.is_none_or(|t| t.elapsed() >= time)
+    }
+
     /// A stage that comes back (rounds) adds to its earlier time.
     fn close(&mut self) {
         let Some((name, since)) = self.current.take() else {
@@ -86,7 +90,12 @@ impl Observer for Progress {
         state.current = Some((name, Instant::now()));
         state.total = total;
         state.done = 0;
-        state.said = Some(Instant::now());
+        // Rounds come back to the same stages: a plain line is for news, or a sign of life.
+        let news = !state.stages.iter().any(|s| s.stage == name);
+        let due = news || state.silent_for(PLAIN_EVERY);
+        if due {
+            state.said = Some(Instant::now());
+        }
         if self.printer.draws {
             let template = match total {
                 Some(_) => "{msg:28} {wide_bar} {pos}/{len} {eta:>4}",
@@ -99,7 +108,7 @@ impl Observer for Progress {
             self.bar.set_position(0);
             self.bar.set_message(name);
             self.bar.enable_steady_tick(Duration::from_millis(200));
-        } else {
+        } else if due {
             self.printer.talk(name);
         }
     }
@@ -111,8 +120,9 @@ impl Observer for Progress {
         }
         let mut state = self.state();
         state.done += steps;
-        let due = state.said.is_none_or(|t| t.elapsed() >= PLAIN_EVERY);
-        if due && let (Some((name, _)), Some(total)) = (state.current, state.total) {
+        if state.silent_for(PLAIN_EVERY)
+            && let (Some((name, _)), Some(total)) = (state.current, state.total)
+        {
             self.printer
                 .talk(&format!("{name}: {} of {total}", state.done));
             state.said = Some(Instant::now());

@@ -206,3 +206,48 @@ fn outputs_are_whole_or_absent() {
     }
     assert!(!dir.path().join("fits/tracks.fits").exists());
 }
+
+#[cfg(unix)]
+#[test]
+fn an_interrupt_leaves_nothing_behind() {
+    use std::process::{Command, Stdio};
+    use std::time::{Duration, Instant};
+
+    let dir = tempfile::tempdir().expect("a folder");
+    campaign(dir.path(), EPOCHS, false);
+    let mut child = Command::new(env!("CARGO_BIN_EXE_asterskein"))
+        .args(["link", "field.toml", "--out", "run", "--quiet"])
+        .current_dir(dir.path())
+        .stderr(Stdio::null())
+        .spawn()
+        .expect("the program starts");
+    let hidden = || {
+        fs::read_dir(dir.path())
+            .expect("a folder")
+            .map(|e| {
+                e.expect("an entry")
+                    .file_name()
+                    .to_string_lossy()
+                    .into_owned()
+            })
+            .filter(|n| n.starts_with('.') || n == "run")
+            .collect::<Vec<_>>()
+    };
+    let start = Instant::now();
+    while hidden().is_empty() && start.elapsed() < Duration::from_secs(60) {
+        std::thread::sleep(Duration::from_millis(1));
+    }
+    let sent = Command::new("kill")
+        .args(["-INT", &child.id().to_string()])
+        .status()
+        .expect("kill runs");
+    assert!(sent.success());
+    let status = child.wait().expect("the program ends");
+    // Either it was stopped, or it had already finished: then the result is whole.
+    if status.success() {
+        assert_eq!(hidden(), ["run"]);
+        assert!(dir.path().join("run/run.json").exists());
+    } else {
+        assert_eq!(hidden(), Vec::<String>::new());
+    }
+}

@@ -1,6 +1,7 @@
 //! A result written to a directory and read back.
 
 mod handoff;
+mod naming;
 mod rulings;
 pub mod sample;
 

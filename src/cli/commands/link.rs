@@ -357,7 +357,13 @@ fn summary(
     out.line("notes", "", "", notes.len());
     out.line("seconds", "time", format!("{seconds:.1} s"), seconds);
     let result = args.out.display().to_string();
-    out.line("result", "result", result.clone(), result);
+    let page = args.out.join("report.html").display().to_string();
+    out.line(
+        "result",
+        "result",
+        format!("{result}  (look at {page})"),
+        result,
+    );
     out
 }
 
