@@ -3,9 +3,11 @@
 mod accepted;
 mod bad_input;
 mod check;
+mod damage;
 mod formats;
 mod injected;
 mod known;
+mod sky;
 
 use std::path::{Path, PathBuf};
 

@@ -15,6 +15,9 @@ pub fn read(bytes: &[u8]) -> Result<Table<'static>, FormatError> {
     let row_bytes = header.whole("NAXIS1")?;
     let n_rows = header.whole("NAXIS2")?;
     let n_fields = header.whole("TFIELDS")?;
+    if row_bytes == 0 && n_rows > 0 {
+        return Err(FormatError::new("NAXIS1 = 0", "rows that hold something"));
+    }
     let data = data.get(..times(row_bytes, n_rows)?).ok_or_else(|| {
         FormatError::new(
             format!("{} bytes of data", data.len()),
@@ -31,7 +34,7 @@ pub fn read(bytes: &[u8]) -> Result<Table<'static>, FormatError> {
         } else {
             width
         };
-        if at + width > row_bytes {
+        if width > row_bytes - at {
             return Err(FormatError::new(
                 format!("columns wider than a row of {row_bytes} bytes"),
                 "TFORM of all columns to add up to NAXIS1",
