@@ -362,17 +362,26 @@ fn canonical_order(x: &[f64], y: &[f64], mag: &[f64], ids: &Ids) -> Vec<u32> {
             Ids::Text(v) => v[a].cmp(&v[b]),
         }
     };
-    // The key travels with the index: comparing it costs no look-up in the common case.
-    let mut keyed: Vec<(f64, u32)> = x.iter().copied().zip(0..).collect();
-    keyed.sort_unstable_by(|&(xa, a), &(xb, b)| {
-        xa.total_cmp(&xb).then_with(|| {
-            let (a, b) = (a as usize, b as usize);
-            y[a].total_cmp(&y[b])
-                .then_with(|| mag[a].total_cmp(&mag[b]))
-                .then_with(|| by_id(a, b))
-        })
-    });
+    // Sorting whole numbers in the order of the floats is faster; few rows share an x.
+    let mut keyed: Vec<(i64, u32)> = x.iter().map(|&x| total_order_key(x)).zip(0..).collect();
+    keyed.sort_unstable();
+    for run in keyed.chunk_by_mut(|a, b| a.0 == b.0) {
+        if run.len() > 1 {
+            run.sort_unstable_by(|&(_, a), &(_, b)| {
+                let (a, b) = (a as usize, b as usize);
+                y[a].total_cmp(&y[b])
+                    .then_with(|| mag[a].total_cmp(&mag[b]))
+                    .then_with(|| by_id(a, b))
+            });
+        }
+    }
     keyed.into_iter().map(|(_, k)| k).collect()
+}
+
+/// A whole number that sorts as the float does (IEEE 754 totalOrder).
+fn total_order_key(v: f64) -> i64 {
+    let bits = v.to_bits().cast_signed();
+    bits ^ ((bits >> 63).cast_unsigned() >> 1).cast_signed()
 }
 
 fn filled(values: Vec<f64>, n: usize) -> Vec<f64> {
@@ -414,6 +423,15 @@ mod tests {
             between.xy > 0.0,
             "a major axis toward north-east correlates x and y"
         );
+    }
+
+    #[test]
+    fn keys_sort_as_floats_do() {
+        let mut v = [3.5, -2.0, 0.0, -1e300, 1e-300, 7e8, -3.0];
+        let mut w = v;
+        v.sort_by(f64::total_cmp);
+        w.sort_by_key(|&x| total_order_key(x));
+        assert_eq!(v, w);
     }
 
     #[test]

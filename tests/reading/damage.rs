@@ -40,6 +40,8 @@ impl Dice {
     }
 }
 
+const MARKS: &[u8] = b"0123456789-.,eE\n\"<>&;*#[]= ";
+
 /// A few bytes changed, removed or doubled, or the end cut off.
 fn damaged(good: &[u8], dice: &mut Dice) -> Vec<u8> {
     let mut bytes = good.to_vec();
@@ -57,7 +59,7 @@ fn damaged(good: &[u8], dice: &mut Dice) -> Vec<u8> {
                 bytes.splice(at..at, again);
             }
             3 if !bytes.is_empty() => bytes[at] = dice.below(256) as u8,
-            _ if !bytes.is_empty() => bytes[at] = b"0123456789-.,eE\n\"<>&;*#[]= "[dice.below(28)],
+            _ if !bytes.is_empty() => bytes[at] = MARKS[dice.below(MARKS.len())],
             _ => {}
         }
     }
