@@ -14,11 +14,18 @@ pub(super) fn read_rows(
     let mut n_rows = 0;
     let mask_bytes = if masked { fields.len().div_ceil(8) } else { 0 };
     while !rest.is_empty() {
+        let n_left = rest.len();
         let mask = take(&mut rest, mask_bytes).map_err(|e| e.in_row(n_rows))?;
         for (k, (field, cells)) in fields.iter().zip(columns.iter_mut()).enumerate() {
             let is_none = masked && mask[k / 8] & (0x80 >> (k % 8)) != 0;
             read_cell(&mut rest, field, cells.as_mut(), is_none)
                 .map_err(|e| e.in_row(n_rows).in_column(&field.name))?;
+        }
+        if rest.len() == n_left {
+            return Err(FormatError::new(
+                "data, but no field that takes a byte of it",
+                "a FIELD for every value of a row",
+            ));
         }
         n_rows += 1;
     }
