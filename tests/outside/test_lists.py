@@ -28,9 +28,9 @@ def test_every_format_gives_the_same_figures(program, tmp_path):
                           capture_output=True, text=True)
     lists = json.loads(done.stdout)["lists"]
     assert len(lists) == len(NAMES)
-    figures = ["detections", "error_floor_mas", "error_median_mas", "brightest_mag", "median_mag",
-               "faintest_mag", "without_mag", "width_mas", "stars_per_element"]
+    figures = ["detections", "error_floor_mas", "error_median_mas", "mag", "without_magnitude",
+               "width_mas", "stars_per_resolution_element"]
     for name, found in zip(NAMES, lists):
         assert [found[f] for f in figures] == [lists[0][f] for f in figures], name
-    assert lists[0]["detections"] == 7 and lists[0]["without_mag"] == 1
-    assert lists[0]["brightest_mag"] == 12.0 and lists[0]["faintest_mag"] == 16.5
+    assert lists[0]["detections"] == 7 and lists[0]["without_magnitude"] == 1
+    assert lists[0]["mag"] == [12.0, 14.25, 16.5]
