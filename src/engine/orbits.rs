@@ -9,7 +9,7 @@ use crate::model::detection::FieldEpoch;
 use crate::model::motion::MotionKind;
 use crate::model::note::Note;
 use crate::model::result::Solution;
-use crate::motion::orbit_fit::{ErrorLaw, OrbitPrior, State};
+use crate::motion::orbit_fit::{ErrorLaw, FitEnd, OrbitPrior, State};
 use crate::motion::refine_mass::{Common, MassProblem, Orbiter, RefinedMass};
 use crate::motion::terms::Terms;
 use crate::track::orbits::{self, About, OrbitData};
@@ -143,8 +143,12 @@ fn words(about: &About<'_>, found: &RefinedMass, given: &Common, orbits: usize) 
         }
         _ => String::new(),
     };
+    let caution = match found.end {
+        FitEnd::Converged => "",
+        FitEnd::StepLimit => " (the solution had not settled at the limit of its steps)",
+    };
     format!(
-        "{orbits} orbits give GM/D^3 = {:.5e} +- {:.1e} mas^3/yr^2{mass}, given {:.5e}; centre ({:.3} +- {:.3}, {:.3} +- {:.3}) mas, given ({:.3}, {:.3}); chi2 {:.0} for {} degrees of freedom; the difference has chi2 {off:.1} for {n} numbers: {}",
+        "{orbits} orbits give GM/D^3 = {:.5e} +- {:.1e} mas^3/yr^2{mass}, given {:.5e}; centre ({:.3} +- {:.3}, {:.3} +- {:.3}) mas, given ({:.3}, {:.3}); chi2 {:.0} for {} degrees of freedom; the difference has chi2 {off:.1} for {n} numbers: {}{caution}",
         found.common[0],
         err(0),
         given[0],

@@ -4,9 +4,12 @@
 //! slightly wrong mu or centre is wrong with it. All Keplerian tracks share mu and the centre,
 //! so they are solved together; the mass in solar masses follows only with the distance.
 //!
-//! Method: damped Gauss-Newton as in [`super::orbit_fit`], with the normal equations in arrow
-//! form: the six numbers of every star are eliminated (Schur complement), which leaves a 5 x 5
-//! system for (mu, x, y, vx, vy) of the mass. Cost per step: linear in the number of detections.
+//! Method: Gauss-Newton in the common values, with the normal equations in arrow form: the six
+//! numbers of every star are eliminated (Schur complement), which leaves a 5 x 5 system for
+//! (mu, x, y, vx, vy) of the mass. After each step every star is fitted to the new mass by
+//! itself, so that one difficult star cannot hold up the rest (variable projection, Golub &
+//! Pereyra 1973, SIAM J. Numer. Anal. 10, 413; from memory). Cost per step: linear in the number
+//! of detections.
 //!
 //! A star can sit in a false minimum while mass and centre are still wrong. Joint solutions
 //! alternate with fits of every star alone, from several starts, until the objective stops
@@ -101,9 +104,10 @@ pub enum RefineError {
     Undetermined { orbits: usize },
 }
 
-const STEP_LIMIT: u32 = 100;
+const STEP_LIMIT: u32 = 60;
 const ROUND_LIMIT: usize = 8;
-const SMALL_GAIN: f64 = 1e-6;
+/// A change of the objective (in units of chi2) that does not matter.
+const SMALL_GAIN: f64 = 1e-4;
 
 /// Where a search stands.
 struct Place {
@@ -149,7 +153,7 @@ impl MassProblem<'_> {
         };
         let mut objective = f64::INFINITY;
         for _ in 0..ROUND_LIMIT {
-            self.refit_stars(&mut at);
+            self.refit_stars(at.common, &mut at.states, true);
             let found = self.descend(&mut at).ok_or(undetermined)?;
             if objective - found < 1e-3 {
                 break;
@@ -189,21 +193,22 @@ impl MassProblem<'_> {
         })
     }
 
-    /// Fits every star alone, from where it is and from starts around the given one.
-    fn refit_stars(&self, at: &mut Place) {
+    /// Fits every star alone to given common values, from where it is and, if `widely`, from
+    /// starts around the given one.
+    fn refit_stars(&self, common: Common, states: &mut [State], widely: bool) {
         let mut points = Vec::new();
-        for (o, state) in self.orbiters.iter().zip(&mut at.states) {
+        for (o, state) in self.orbiters.iter().zip(states) {
             points.clear();
             points.extend(o.points.iter().map(|p| {
                 let dt = p.t_yr - self.t_ref_yr;
                 Point {
-                    x_mas: p.x_mas - at.common[1] - at.common[3] * dt,
-                    y_mas: p.y_mas - at.common[2] - at.common[4] * dt,
+                    x_mas: p.x_mas - common[1] - common[3] * dt,
+                    y_mas: p.y_mas - common[2] - common[4] * dt,
                     ..*p
                 }
             }));
             let problem = OrbitProblem {
-                gm_mas3_yr2: at.common[0],
+                gm_mas3_yr2: common[0],
                 t_ref_yr: self.t_ref_yr,
                 observed: Observations {
                     points: &points,
@@ -213,8 +218,14 @@ impl MassProblem<'_> {
                 errors: self.errors,
                 terms: Terms::default(),
             };
-            let mut starts = vec![*state, o.start];
-            for (i, factor) in [(2, 0.5), (2, 1.6), (2, -1.0), (5, 0.5), (5, 1.6), (5, -1.0)] {
+            let mut starts = vec![*state];
+            if widely {
+                starts.push(o.start);
+            }
+            for (i, factor) in [(2, 0.5), (2, 1.6), (2, -1.0), (5, 0.5), (5, 1.6), (5, -1.0)]
+                .into_iter()
+                .filter(|_| widely)
+            {
                 let mut s = o.start;
                 s[i] *= factor;
                 starts.push(s);
@@ -230,47 +241,45 @@ impl MassProblem<'_> {
         }
     }
 
-    /// Joint damped Gauss-Newton descent; the objective reached, `None` when the system cannot
-    /// be solved.
+    /// Descent in the common values with all stars fitted at each; the objective reached, `None`
+    /// when the system cannot be solved.
     fn descend(&self, at: &mut Place) -> Option<f64> {
         let mut here = self.normal(&at.common, &at.states);
-        let mut trial_states = at.states.clone();
-        let mut damping = 1e-3;
+        let mut damping = 0.0;
         at.end = FitEnd::StepLimit;
         for _ in 0..STEP_LIMIT {
             at.steps += 1;
             let Some((d_common, d_states)) = self.step(&here, damping) else {
-                damping *= 10.0;
+                damping = (damping * 10.0).max(1e-6);
                 if damping > 1e9 {
                     return None;
                 }
                 continue;
             };
             let trial = at.common - d_common;
-            for (t, (s, d)) in trial_states.iter_mut().zip(at.states.iter().zip(&d_states)) {
-                *t = s - d;
+            let mut states: Vec<State> = at
+                .states
+                .iter()
+                .zip(&d_states)
+                .map(|(s, d)| s - d)
+                .collect();
+            if trial[0] > 0.0 {
+                self.refit_stars(trial, &mut states, false);
             }
-            let there = self.normal(&trial, &trial_states);
+            let there = self.normal(&trial, &states);
             let gain = here.objective - there.objective;
-            if gain.abs() < SMALL_GAIN && damping < 1.0 && gain < 0.0 {
-                // Rounding decides: the minimum is reached.
-                at.end = FitEnd::Converged;
-                break;
-            }
-            if gain >= 0.0 && trial[0] > 0.0 {
+            if trial[0] > 0.0 && gain >= 0.0 {
                 at.common = trial;
-                at.states.copy_from_slice(&trial_states);
+                at.states = states;
                 here = there;
-                if gain < SMALL_GAIN && damping < 1.0 {
-                    at.end = FitEnd::Converged;
-                    break;
-                }
-                damping = (damping * 0.1).max(1e-12);
-            } else if damping > 1e12 {
+                damping *= 0.1;
+            } else {
+                damping = (damping * 8.0).max(1e-3);
+            }
+            // Close to the minimum a step changes nothing that matters, in either direction.
+            if trial[0] > 0.0 && gain.abs() < SMALL_GAIN || damping > 1e9 {
                 at.end = FitEnd::Converged;
                 break;
-            } else {
-                damping = (damping * 8.0).max(1e-6);
             }
         }
         Some(here.objective)

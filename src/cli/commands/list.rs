@@ -6,7 +6,7 @@ use std::path::PathBuf;
 use anyhow::Context;
 use asterskein::io::number_text::{push_float, push_int};
 use asterskein::io::read_run;
-use asterskein::io::result_tables::ELEMENTS;
+use asterskein::io::result_tables::{ELEMENTS, error_name};
 use asterskein::io::table::{Column, Precision, Table, Values};
 use asterskein::model::flag;
 use serde_json::{Map, Value};
@@ -32,7 +32,9 @@ pub struct Args {
     #[arg(long, value_delimiter = ',', value_name = "FLAGS")]
     pub flag: Vec<String>,
     /// Sort by a column, smallest first (speeds and probabilities: largest first); its unit may
-    /// be left out, as in `--by pericentre_speed`. Rows without a value come last.
+    /// be left out, as in `--by pericentre_speed`. Where a largest-first column has errors, rows
+    /// are ranked by value minus error, so that what is hardly known does not lead. Rows without
+    /// a value come last.
     #[arg(long, value_name = "COLUMN")]
     pub by: Option<String>,
     /// Sort the other way round.
@@ -250,7 +252,8 @@ fn chosen_rows(args: &Args, table: &Table<'_>) -> anyhow::Result<Vec<usize>> {
     }
     if let Some(by) = &args.by {
         let at = column_called(table, by).ok_or_else(|| no_column(args, table, by))?;
-        sort_rows(&mut rows, &table.columns[at], args.reverse);
+        let error = table.column(&error_name(&table.columns[at].name));
+        sort_rows(&mut rows, &table.columns[at], error, args.reverse);
     }
     rows.truncate(args.limit.unwrap_or(usize::MAX));
     Ok(rows)
@@ -266,7 +269,7 @@ fn column_called(table: &Table<'_>, name: &str) -> Option<usize> {
 }
 
 /// Sorts rows by a column; those without a value come last either way, ties stay in table order.
-fn sort_rows(rows: &mut [usize], column: &Column<'_>, reverse: bool) {
+fn sort_rows(rows: &mut [usize], column: &Column<'_>, error: Option<&Column<'_>>, reverse: bool) {
     let largest_first = ["speed", "probability", "ln_evidence", "n_members"]
         .iter()
         .any(|w| column.name.contains(w));
@@ -287,7 +290,13 @@ fn sort_rows(rows: &mut [usize], column: &Column<'_>, reverse: bool) {
         });
     };
     match &column.values {
-        Values::Float(s, _) => numbers(&|k| s.at(k), rows),
+        Values::Float(s, _) => {
+            let error = |k: usize| match error.map(|e| &e.values) {
+                Some(Values::Float(e, _)) if largest_first && !e.at(k).is_nan() => e.at(k),
+                _ => 0.0,
+            };
+            numbers(&|k| s.at(k) - error(k), rows);
+        }
         Values::Int(s) => numbers(&|k| s.at(k).map_or(f64::NAN, |v| v as f64), rows),
         Values::Bool(s) => {
             let at = |k| s.at(k).map_or(f64::NAN, |b| f64::from(u8::from(b)));
