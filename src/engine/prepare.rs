@@ -35,7 +35,7 @@ pub fn dynamics(campaign: &Campaign) -> Dynamics {
             wide: campaign.stars.foreground.map_or(
                 Wide {
                     fraction: 0.02,
-                    speed_mas_yr: 5.0 * campaign.stars.speed_mas_yr,
+                    speed_mas_yr: 2.0 * campaign.stars.speed_mas_yr,
                 },
                 |f| Wide {
                     fraction: f.fraction.clamp(0.001, 0.999),

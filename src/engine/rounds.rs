@@ -4,7 +4,9 @@ use rayon::prelude::*;
 
 use super::estimate;
 use super::observer::Observer;
+use super::prepare::apply_laws;
 use crate::maths::assign::{Edges, Solver};
+use crate::maths::order;
 use crate::resolve::grow::{self, Scratch};
 use crate::resolve::joint;
 use crate::resolve::scene::Scene;
@@ -134,7 +136,11 @@ pub fn births(scene: &Scene, work: &mut Work, joint: bool, tried: &mut Tried) ->
         for (draft, &(e, d)) in drafts.into_iter().zip(&batch) {
             tried.add(e, d as usize);
             let Some(draft) = draft else { continue };
-            let least = BIRTH_NATS;
+            let least = if scene.sights.len() <= FEW_EPOCHS {
+                PAIR_NATS
+            } else {
+                BIRTH_NATS
+            };
             if draft.worth <= least {
                 if joint
                     && work.desks[e].groups[d as usize].is_empty()
@@ -370,7 +376,11 @@ fn judge(scene: &Scene, work: &Work, k: u32, sc: &mut Scratch) -> Verdict {
             }
         }
     }
-    let least = DEATH_NATS;
+    let least = if scene.sights.len() <= FEW_EPOCHS {
+        PAIR_NATS - 1.0
+    } else {
+        DEATH_NATS
+    };
     match best {
         Some((bw, star)) if bw > w + 1.0 && bw > least => Verdict::Regrown(Box::new(star)),
         _ if w > least && alone.len() >= 2 => Verdict::Kept,
@@ -409,33 +419,48 @@ fn far_apart(scene: &Scene, work: &Work, queue: &mut std::collections::VecDeque<
 /// Campaigns of so few epochs begin with an assignment of pairs.
 const FEW_EPOCHS: usize = 3;
 
+/// Least evidence of a pair in so short a campaign: more likely than not.
+const PAIR_NATS: f64 = 0.0;
+/// Evidence from which a pair may teach the difference of the magnitude scales.
+const SECURE_NATS: f64 = 8.0;
+/// Scatter of the colours of stars between two instruments whose bands are not known to be the
+/// same (common practice, no source).
+const COLOUR_MAG: f64 = 0.2;
+
 /// First tracks of a campaign of two or three epochs: between its first two epochs the set of
 /// pairs with the largest total evidence (an assignment). With so little to hold a track
 /// together, taking the best pair first would let one star rob the next of its partner.
-fn pair_births(scene: &Scene, work: &mut Work) {
+fn pair_births(scene: &mut Scene, work: &mut Work) {
     let &[first, second, ..] = scene.by_time.as_slice() else {
         return;
     };
-    let frozen = &*work;
-    let drafts: Vec<Vec<(u32, grow::Draft)>> = (0..scene.sights[first].len() as u32)
-        .into_par_iter()
-        .map_init(Scratch::default, |sc, d| {
-            partners(scene, frozen, first, d, 8)
-                .into_iter()
-                .filter(|&(e, _)| e == second)
-                .filter_map(|(e, q)| {
-                    grow::grow(scene, frozen, &[(first, d), (e, q)], -25.0, None, sc)
-                        .filter(|g| g.worth > BIRTH_NATS && g.star.cells[e] == Cell::Alone(q))
-                        .map(|g| (q, g))
-                })
-                .collect()
+    if scene.sights[first].data.instrument != scene.sights[second].data.instrument {
+        for s in &mut scene.sights {
+            s.sensor.errors.mag_floor = s.sensor.errors.mag_floor.max(COLOUR_MAG);
+            apply_laws(s);
+        }
+    }
+    let mut steps: Vec<f64> = pairs(scene, work, first, second)
+        .iter()
+        .filter_map(|row| {
+            row.iter()
+                .max_by(|a, b| a.draft.worth.total_cmp(&b.draft.worth))
         })
+        .filter(|p| p.draft.worth > SECURE_NATS && p.step_mag.is_finite())
+        .map(|p| p.step_mag)
         .collect();
+    if steps.len() >= 2
+        && let Some(step) = order::median(&mut steps)
+    {
+        scene.sights[second].sensor.zero_point_mag -= step;
+        apply_laws(&mut scene.sights[second]);
+    }
+    let drafts = pairs(scene, work, first, second);
     let mut starts = vec![0u32];
     let (mut to, mut cost) = (Vec::new(), Vec::new());
     for row in &drafts {
-        to.extend(row.iter().map(|x| x.0));
-        cost.extend(row.iter().map(|x| x.1.worth));
+        to.extend(row.iter().map(|p| p.row));
+        cost.extend(row.iter().map(|p| p.draft.worth));
         starts.push(to.len() as u32);
     }
     let mut solver = Solver::default();
@@ -446,10 +471,42 @@ fn pair_births(scene: &Scene, work: &mut Work) {
         cost: &cost,
     });
     for (row, &mate) in drafts.iter().zip(solver.right_of_left()) {
-        if let Some((_, g)) = row.iter().find(|x| x.0 == mate) {
-            work.add(scene, g.star.clone());
+        if let Some(p) = row.iter().find(|p| p.row == mate) {
+            work.add(scene, p.draft.star.clone());
         }
     }
+}
+
+/// A detection of the second epoch that could be the same star.
+struct Pair {
+    row: u32,
+    draft: grow::Draft,
+    /// Magnitude there minus here.
+    step_mag: f64,
+}
+
+fn pairs(scene: &Scene, work: &Work, first: usize, second: usize) -> Vec<Vec<Pair>> {
+    (0..scene.sights[first].len() as u32)
+        .into_par_iter()
+        .map_init(Scratch::default, |sc, d| {
+            partners(scene, work, first, d, 8)
+                .into_iter()
+                .filter(|&(e, _)| e == second)
+                .filter_map(|(e, q)| {
+                    let draft = grow::grow(scene, work, &[(first, d), (e, q)], -25.0, None, sc)?;
+                    let step_mag =
+                        scene.sights[e].mag[q as usize] - scene.sights[first].mag[d as usize];
+                    (draft.worth > PAIR_NATS && draft.star.cells[e] == Cell::Alone(q)).then_some(
+                        Pair {
+                            row: q,
+                            draft,
+                            step_mag,
+                        },
+                    )
+                })
+                .collect()
+        })
+        .collect()
 }
 
 /// Rounds of the scheme.

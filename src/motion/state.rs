@@ -31,6 +31,9 @@ pub struct Wide {
     pub speed_mas_yr: f64,
 }
 
+/// Speeds up to so many times the tail's width are looked for where the field is empty enough.
+const TOP_SPEEDS: f64 = 200.0;
+
 /// How stars of this field move.
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub enum Dynamics {
@@ -154,7 +157,7 @@ impl Dynamics {
             }
             Self::Free {
                 speed_mas_yr, wide, ..
-            } => 4.0 * speed_mas_yr.max(wide.speed_mas_yr),
+            } => TOP_SPEEDS * speed_mas_yr.max(wide.speed_mas_yr),
         }
     }
 
@@ -172,21 +175,20 @@ impl Dynamics {
     }
 }
 
-/// Mixture of two Gaussians in velocity, one in acceleration. The curvature is that of the
-/// component mix at hand, which keeps Newton steps safe.
+/// Velocity: a Gaussian core and a long tail, a two-dimensional Student distribution with one
+/// degree of freedom, (1 + v^2/s^2)^(-3/2) / (2 pi s^2); acceleration: a Gaussian. The curvature
+/// is that of the component mix at hand (the weights of Lange, Little & Taylor 1989, JASA 84,
+/// 881; from memory), which keeps Newton steps safe.
 fn free_prior(speed: f64, accel: f64, wide: Wide, p: &P6) -> Prior {
     let v2 = p[2] * p[2] + p[3] * p[3];
     let two_pi = 2.0 * std::f64::consts::PI;
-    let ln = |share: f64, sigma: f64| {
-        share.ln() - two_pi.ln() - 2.0 * sigma.ln() - 0.5 * v2 / (sigma * sigma)
-    };
-    let (core, far) = (
-        ln(1.0 - wide.fraction, speed),
-        ln(wide.fraction, wide.speed_mas_yr),
-    );
+    let s2 = wide.speed_mas_yr * wide.speed_mas_yr;
+    let core =
+        (1.0 - wide.fraction).ln() - two_pi.ln() - 2.0 * speed.ln() - 0.5 * v2 / (speed * speed);
+    let far = wide.fraction.ln() - two_pi.ln() - s2.ln() - 1.5 * (1.0 + v2 / s2).ln();
     let total = crate::maths::lnprob::ln_add(core, far);
     let w = (core - total).exp();
-    let iv = w / (speed * speed) + (1.0 - w) / (wide.speed_mas_yr * wide.speed_mas_yr);
+    let iv = w / (speed * speed) + (1.0 - w) * 3.0 / (s2 + v2);
     let ia = accel.powi(-2);
     let a2 = p[4] * p[4] + p[5] * p[5];
     let mut grad = P6::zeros();
