@@ -1,6 +1,7 @@
 //! The order of stages, and everything that runs in parallel.
 
 pub mod estimate;
+pub mod frames;
 pub mod observer;
 pub mod orbits;
 pub mod pipeline;
@@ -8,6 +9,7 @@ pub mod prepare;
 pub mod rounds;
 pub mod settings;
 
+pub use frames::{Linked, link_lists};
 pub use observer::{Observer, Silent};
 pub use pipeline::{EngineError, link};
 pub use settings::Settings;

@@ -24,6 +24,10 @@ pub enum EngineError {
     Threads(#[from] rayon::ThreadPoolBuildError),
     #[error("the campaign has {campaign} epochs but {lists} lists were handed in")]
     Mismatch { campaign: usize, lists: usize },
+    #[error(transparent)]
+    Frame(#[from] crate::frame::FrameError),
+    #[error("these epochs cannot be placed in the common frame: {0} (--allow-unplaced leaves them out)")]
+    Unplaced(String),
 }
 
 /// Link a campaign whose lists are in the common frame.

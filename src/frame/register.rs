@@ -671,7 +671,11 @@ fn moved(list: &FieldEpoch, map: &PolyMap, zero: Option<(f64, f64)>) -> FieldEpo
     }
 }
 
-/// An epoch that is left out: its time and instrument, no rows.
+/// A place where no star is: the outline of an epoch that shows nothing.
+const NOWHERE_MAS: f64 = 1e12;
+
+/// An epoch that is left out: its time and instrument, no rows, and no place where a star could
+/// have been seen, so that none counts as missing.
 fn empty(list: &FieldEpoch) -> FieldEpoch {
     FieldEpoch {
         time: list.time,
@@ -685,7 +689,14 @@ fn empty(list: &FieldEpoch) -> FieldEpoch {
         rv_km_s: Vec::new(),
         rv_err_km_s: Vec::new(),
         quality: Vec::new(),
-        region: Region::default(),
+        region: Region {
+            outline_mas: vec![
+                [NOWHERE_MAS, NOWHERE_MAS],
+                [NOWHERE_MAS + 1e3, NOWHERE_MAS],
+                [NOWHERE_MAS, NOWHERE_MAS + 1e3],
+            ],
+            holes_mas: Vec::new(),
+        },
     }
 }
 

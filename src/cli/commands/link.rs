@@ -4,7 +4,6 @@ use std::path::PathBuf;
 
 use anyhow::Context;
 use asterskein::engine::{self, Observer, Settings};
-use asterskein::frame;
 use asterskein::io::campaign::read_campaign;
 use asterskein::io::format::Format;
 use asterskein::io::known::read_known_stars;
@@ -115,9 +114,6 @@ pub fn run(args: &Args, printer: &Printer, threads: usize) -> anyhow::Result<Exi
         Some(path) => read_rulings(path, &campaign, &lists)?,
         None => Vec::new(),
     };
-    progress.stage("placing in the frame", None);
-    let epochs = frame::known::register(&campaign, &lists)?;
-
     let settings = Settings {
         threads,
         seed: args.seed,
@@ -126,7 +122,8 @@ pub fn run(args: &Args, printer: &Printer, threads: usize) -> anyhow::Result<Exi
         tile_mas: args.tile_mas,
         rulings,
     };
-    let mut solution = engine::link(&campaign, &epochs, &settings, &progress)?;
+    let linked = engine::link_lists(&campaign, &lists, &settings, &progress)?;
+    let (epochs, mut solution) = (linked.epochs, linked.solution);
     change::rows_to_ids(&mut solution.rivals, &campaign, &lists);
 
     progress.stage("writing", None);
