@@ -26,7 +26,9 @@ pub enum EngineError {
     Mismatch { campaign: usize, lists: usize },
     #[error(transparent)]
     Frame(#[from] crate::frame::FrameError),
-    #[error("these epochs cannot be placed in the common frame: {0} (--allow-unplaced leaves them out)")]
+    #[error(
+        "these epochs cannot be placed in the common frame: {0} (--allow-unplaced leaves them out)"
+    )]
     Unplaced(String),
 }
 

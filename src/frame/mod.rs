@@ -7,6 +7,9 @@
 //! map, fully correlated within its epoch. An epoch that cannot be placed has no rows in the
 //! common frame and says why: see [`Registered::placed`].
 
+// Indices run over matrices, axes and several columns at once.
+#![allow(clippy::needless_range_loop)]
+
 pub mod adjust;
 mod chain;
 pub mod footprint;
