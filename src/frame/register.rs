@@ -577,7 +577,7 @@ fn gauge_note(g: &Gauge) -> Note {
         )
     } else {
         format!(
-            "no list fixes drift, rotation and scale rate: the mean motion, rotation and expansion of {} reference stars is set to zero; that is uncertain by {:.2} mas/yr (x), {:.2} mas/yr (y), {:.2} and {:.2} mas/yr at 1000 mas; the central mass was not used for it",
+            "no list fixes drift, rotation and scale rate: the mean motion, rotation and expansion of {} reference stars is set to zero; that is uncertain by {:.2} mas/yr (x), {:.2} mas/yr (y), {:.2} and {:.2} mas/yr at 1000 mas; the central mass enters only through the curvature of their paths",
             g.n_stars,
             g.drift_err_mas_yr[0],
             g.drift_err_mas_yr[1],
