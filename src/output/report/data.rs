@@ -519,7 +519,9 @@ fn orbits(input: &ReportInput, selection: &Selection) -> Orbits {
             && t1 > t0
         {
             let place = |time: f64| orbit_place(&t.motion, mass, time);
-            paths.insert(page, sample(t0 - 0.5, t1 + 0.5, &place));
+            // Plots reach a little beyond the first and last epoch.
+            let beyond_yr = 0.5 + 0.05 * (t1 - t0);
+            paths.insert(page, sample(t0 - beyond_yr, t1 + beyond_yr, &place));
         }
         if let Some(orbit) = &t.orbit {
             rows.insert(page, vec![orbit_row(1, None, None, orbit)]);
