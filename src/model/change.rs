@@ -207,4 +207,33 @@ mod tests {
         assert_eq!(read, all);
         assert_eq!(Change::read("something else altogether"), None);
     }
+
+    #[test]
+    fn clauses_that_are_not_of_the_form_stay() {
+        let mut rivals = [Rival {
+            tangle: 0,
+            rank: 1,
+            ln_odds: -1.0,
+            change: "L00001 takes 2003 apr:0 from L00002; a further star".to_owned(),
+        }];
+        let before = rivals[0].change.clone();
+        let campaign = Campaign {
+            path: std::path::PathBuf::new(),
+            name: String::new(),
+            reference: crate::model::time::JulianYear(2000.0),
+            origin: None,
+            central: None,
+            stars: crate::model::campaign::StarMotions {
+                speed_mas_yr: 1.0,
+                foreground: None,
+            },
+            instruments: Vec::new(),
+            epochs: Vec::new(),
+            lists: None,
+            known_stars: None,
+            velocities: None,
+        };
+        rows_to_ids(&mut rivals, &campaign, &[]);
+        assert_eq!(rivals[0].change, before);
+    }
 }

@@ -140,3 +140,33 @@ pub fn sentence(
     }
     Some(Change::sentence(&changes))
 }
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::resolve::program::Builder;
+
+    /// Star 7 holds the detection in row 2 of epoch 3, star 9 could have it at a loss of one nat;
+    /// stars die at a loss beyond what is listed.
+    #[test]
+    fn a_lost_detection_is_told_in_the_numbers_of_the_search() {
+        let mut b = Builder::default();
+        let (p, q) = (b.track(20.0), b.track(20.0));
+        b.source(3, 2, &[p], 5.0);
+        b.source(3, 2, &[q], 4.0);
+        let program = b.finish();
+        let best = Explanation {
+            exists: vec![true, true],
+            made_by: vec![0],
+        };
+        let found = find(&program, &best, &[7, 9]);
+        assert_eq!(found.len(), 1);
+        assert!((found[0].ln_odds + 1.0).abs() < 1e-12);
+        let taken = StarStep::Takes {
+            star: 9,
+            at: (3, 2),
+            from: Some(7),
+        };
+        assert_eq!(found[0].steps, [taken]);
+    }
+}
