@@ -8,7 +8,7 @@ use crate::link::tangles::{Claim, tangles};
 use crate::model::flag::Flags;
 use crate::model::result::Certificate;
 use crate::resolve::exact::{Budget, certify};
-use crate::resolve::joint::Choices;
+use crate::resolve::joint::{Choices, Option_};
 use crate::resolve::program::{Builder, FALSE};
 use crate::resolve::scene::Scene;
 use crate::resolve::work::Work;
@@ -56,12 +56,22 @@ pub fn groups(choices: &[Choices], n_stars: usize) -> Vec<Vec<u32>> {
     tangles(n_stars, &claims, &[])
 }
 
+/// Best gain of a detection when only the other stars of its group may make it; `options` are
+/// best first.
+fn gain_without(options: &[Option_], group: &Option_, star: u32) -> f64 {
+    options
+        .iter()
+        .find(|o| !o.stars.has(star) && o.stars.members().iter().all(|&m| group.stars.has(m)))
+        .map_or(0.0, |o| o.gain.max(0.0))
+}
+
 /// Certify one group.
 #[must_use]
 pub fn prove(scene: &Scene, work: &Work, choices: &[Choices], stars: &[u32]) -> Tangle {
     let mut local = std::collections::BTreeMap::new();
     let mut builder = Builder::default();
-    // The part of a track's worth that is not in its options.
+    // The part of a track's worth that is not in its options: without the track its detections
+    // go to the best that the others can make of them, and exactly its worth is lost.
     for &k in stars {
         let star = &work.stars[k as usize];
         let mut in_options = 0.0;
@@ -71,7 +81,7 @@ pub fn prove(scene: &Scene, work: &Work, choices: &[Choices], stars: &[u32]) -> 
                     .iter()
                     .find(|o| o.stars == work.desks[e].groups[d as usize])
             {
-                in_options += o.gain / o.stars.len() as f64;
+                in_options += o.gain - gain_without(&choices[e].options[d as usize], o, k);
             }
         }
         let id = builder.track(star.worth - in_options);
