@@ -46,20 +46,20 @@ pub enum Command {
     Check(commands::check::Args),
     /// Link the detections of a campaign into tracks (the main job).
     Link(commands::link::Args),
+    /// Draw a result again, or a part of it.
+    Report(commands::report::Args),
+    /// Put made-up stars into the lists of a result, link again, and count what is found.
+    Recover(commands::recover::Args),
     /// Write observations, start orbits and conventions of chosen tracks for an orbit fitter.
     Handoff(commands::handoff::Args),
     /// Print a table of a result, or some rows and columns of it.
     List(commands::list::Args),
-    /// Make a campaign with known truth.
-    Mock(commands::mock::Args),
-    /// Put made-up stars into the lists of a result, link again, and count what is found.
-    Recover(commands::recover::Args),
-    /// Judge a result by the truth of its made-up campaign.
-    Score(commands::score::Args),
-    /// Draw a result again, or a part of it.
-    Report(commands::report::Args),
     /// Say why a track or a detection came out as it did, and how to rule otherwise.
     Explain(commands::explain::Args),
+    /// Make a campaign with known truth.
+    Mock(commands::mock::Args),
+    /// Judge a result by the truth of its made-up campaign.
+    Score(commands::score::Args),
     /// Print completions for a shell.
     #[command(hide = true)]
     Completions(commands::shell::Args),
