@@ -7,6 +7,7 @@ pub mod orbits;
 pub mod pipeline;
 pub mod prepare;
 pub mod rounds;
+pub mod rulings;
 pub mod settings;
 
 pub use frames::{Linked, link_lists};

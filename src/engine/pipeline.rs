@@ -3,6 +3,7 @@
 use rayon::prelude::*;
 
 use super::observer::Observer;
+use super::rulings::{self, Broken, Discards};
 use super::settings::Settings;
 use super::{orbits, prepare, rounds};
 use crate::maths::lnprob::logistic;
@@ -30,12 +31,20 @@ pub enum EngineError {
         "these epochs cannot be placed in the common frame: {0} (--allow-unplaced leaves them out)"
     )]
     Unplaced(String),
+    #[error(
+        "the search does not follow the ruling `{}` at line {}: its detections are held by {}; \
+         only rulings that agree with the search, `discard` and `name` can be carried out so far",
+        .0.ruling, .0.line,
+        if .0.tracks.is_empty() { "no track".to_owned() } else { .0.tracks.join(", ") }
+    )]
+    Ruling(Broken),
 }
 
 /// Link a campaign whose lists are in the common frame.
 ///
 /// # Errors
-/// When lists and epochs do not correspond, or no threads can be started.
+/// When lists and epochs do not correspond, no threads can be started, or the result breaks a
+/// ruling.
 pub fn link(
     campaign: &Campaign,
     epochs: &[FieldEpoch],
@@ -51,13 +60,19 @@ pub fn link(
     let pool = rayon::ThreadPoolBuilder::new()
         .num_threads(settings.threads)
         .build()?;
-    Ok(pool.install(|| {
+    let discards = Discards::of(&settings.rulings, epochs.len());
+    let epochs = &*discards.without(epochs);
+    let mut solution = pool.install(|| {
         let mut scene = prepare::scene(campaign, epochs);
         let work = rounds::run(&mut scene, observer);
         let mut solution = conclude(campaign, epochs, &scene, work, observer);
         orbits::conclude(campaign, epochs, settings, &mut solution, observer);
         solution
-    }))
+    });
+    let names: Vec<&str> = campaign.epochs.iter().map(|e| e.name.as_str()).collect();
+    discards.restore(&mut solution, &names);
+    rulings::apply(&mut solution, &settings.rulings).map_err(EngineError::Ruling)?;
+    Ok(solution)
 }
 
 /// Beliefs, proofs and tables of a finished search.

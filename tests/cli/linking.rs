@@ -156,6 +156,38 @@ fn a_ruled_name_is_borne_by_its_track() {
 }
 
 #[test]
+fn rulings_are_followed_or_the_run_fails() {
+    let dir = tempfile::tempdir().expect("a folder");
+    campaign(dir.path(), EPOCHS, false);
+    let rule = |text: &str| fs::write(dir.path().join("r.toml"), text).expect("written");
+    rule(
+        "[[discard]]\ndetection = \"y2:12\"\nreason = \"a spike\"\n\
+         [[together]]\ndetections = [\"y1:12\", \"y4:12\"]\nreason = \"clear\"\n\
+         [[apart]]\ndetections = [\"y1:12\", \"y4:13\"]\nreason = \"clear\"\n",
+    );
+    let found = link(dir.path(), &["--out", "run", "--rulings", "r.toml"]);
+    assert_eq!(found["leftovers"], 1);
+    assert_eq!(found["memberships"], 49 * EPOCHS - 1);
+    let (_, text, _) = run(dir.path(), &["explain", "run", "y2:12"]);
+    assert!(
+        text.contains("in no track") && text.contains("ruled:"),
+        "{text}"
+    );
+    let (_, text, _) = run(
+        dir.path(),
+        &["list", "run", "--flag", "ruled", "--columns", "track"],
+    );
+    assert_eq!(text.lines().count(), 3, "{text}");
+    // What contradicts the data so plainly is said, and nothing is written.
+    rule("[[together]]\ndetections = [\"y1:12\", \"y4:13\"]\nreason = \"no\"\n");
+    let args = ["link", "field.toml", "--out", "two", "--rulings", "r.toml"];
+    let (code, _, stderr) = run(dir.path(), &args);
+    assert_eq!(code, 1);
+    assert!(stderr.contains("`together` at line 1"), "{stderr}");
+    assert!(!dir.path().join("two").exists());
+}
+
+#[test]
 fn outputs_are_whole_or_absent() {
     let dir = tempfile::tempdir().expect("a folder");
     campaign(dir.path(), EPOCHS, false);
