@@ -1,5 +1,6 @@
 //! All integration tests, one binary.
 mod cli;
+mod frames;
 mod inject;
 mod layering;
 mod motion;
