@@ -7,6 +7,7 @@ use super::Linked;
 use crate::inject::settings::StarSettings;
 use crate::inject::stars::{Sky, normal, straight};
 use crate::maths::order;
+use crate::model::region::Region;
 use crate::motion::elements::Elements;
 use crate::motion::kepler::propagate;
 
@@ -14,6 +15,8 @@ use crate::motion::kepler::propagate;
 const BELOW_LIMIT_MAG: f64 = 0.7;
 /// A pair passes within this many fwhm.
 const PASS_FWHM: f64 = 0.6;
+/// A star outside the outlines is drawn again so many times.
+const VIEW_ATTEMPTS: usize = 200;
 
 /// A made-up star: state relative to the mass (or origin) at the reference epoch.
 #[derive(Clone, Copy, Debug)]
@@ -40,6 +43,8 @@ pub struct Population {
     fwhm_mas: f64,
     bright_mag: f64,
     faint_mag: f64,
+    /// Times and outlines of the epochs.
+    views: Vec<(f64, Region)>,
 }
 
 impl Population {
@@ -64,6 +69,9 @@ impl Population {
             t_ref_yr: c.reference.yr(),
             first_yr: times().fold(f64::INFINITY, f64::min),
             last_yr: times().fold(f64::NEG_INFINITY, f64::max),
+            views: (run.epochs.iter())
+                .map(|e| (e.time.yr(), e.region.clone()))
+                .collect(),
             radius_mas: order::quantile(&mut radii, 0.98)
                 .unwrap_or(widest)
                 .max(widest),
@@ -90,7 +98,7 @@ impl Population {
         let mut out: Vec<MadeStar> = Vec::with_capacity(n);
         while out.len() < n {
             let k = out.len();
-            let mut star = self.single(k % 2 == 1, rng);
+            let mut star = self.single_in_view(k % 2 == 1, rng);
             if k.is_multiple_of(pair_every) && k + 1 < n {
                 star.pair = Some(first_number + k as u32);
                 let other = self.passing(&star, rng);
@@ -101,6 +109,22 @@ impl Population {
             }
         }
         out
+    }
+
+    /// A star that half of the epochs could have seen.
+    fn single_in_view(&self, tight: bool, rng: &mut impl Rng) -> MadeStar {
+        let mut star = self.single(tight, rng);
+        for _ in 0..VIEW_ATTEMPTS {
+            let inside = self.views.iter().filter(|(t_yr, region)| {
+                let p = self.place(&star, *t_yr);
+                region.contains(p[0], p[1])
+            });
+            if 2 * inside.count() >= self.views.len() {
+                break;
+            }
+            star = self.single(tight, rng);
+        }
+        star
     }
 
     fn single(&self, tight: bool, rng: &mut impl Rng) -> MadeStar {
