@@ -7,7 +7,8 @@ use crate::io::table::{Precision, Table};
 #[must_use]
 pub fn injected_table(stars: &[Recovered]) -> Table<'_> {
     let int = |v: u32| Some(i64::from(v));
-    let full = Precision::Full;
+    // Few enough digits that a table made in one go equals one that was resumed from text.
+    let digits = Precision::Decimals(4);
     Table::new(
         "injected",
         "Made-up stars put into the lists, and what became of them",
@@ -19,46 +20,50 @@ pub fn injected_table(stars: &[Recovered]) -> Table<'_> {
         "stars of one batch were in the lists together",
         move |k| int(stars[k].batch),
     )
-    .float("mag", "mag", "magnitude", full, |k| stars[k].mag)
+    .float("mag", "mag", "magnitude", digits, |k| stars[k].mag)
     .float(
         "x_mas",
         "mas",
         "east of the mass or origin at the reference epoch",
-        full,
+        digits,
         |k| stars[k].x_mas,
     )
     .float(
         "y_mas",
         "mas",
         "north of the mass or origin at the reference epoch",
-        full,
+        digits,
         |k| stars[k].y_mas,
     )
-    .float("vx_mas_yr", "mas / yr", "velocity toward east", full, |k| {
-        stars[k].vx_mas_yr
-    })
+    .float(
+        "vx_mas_yr",
+        "mas / yr",
+        "velocity toward east",
+        digits,
+        |k| stars[k].vx_mas_yr,
+    )
     .float(
         "vy_mas_yr",
         "mas / yr",
         "velocity toward north",
-        full,
+        digits,
         |k| stars[k].vy_mas_yr,
     )
     .float(
         "radius_mas",
         "mas",
         "distance from the mass or origin on the sky",
-        full,
+        digits,
         |k| stars[k].radius_mas,
     )
     .float(
         "pericentre_mas",
         "mas",
         "least distance from the mass",
-        full,
+        digits,
         |k| stars[k].pericentre_mas.unwrap_or(f64::NAN),
     )
-    .float("period_yr", "yr", "period of the orbit", full, |k| {
+    .float("period_yr", "yr", "period of the orbit", digits, |k| {
         stars[k].period_yr.unwrap_or(f64::NAN)
     })
     .int(
