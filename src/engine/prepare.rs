@@ -34,7 +34,7 @@ pub fn dynamics(campaign: &Campaign) -> Dynamics {
             accel_mas_yr2: FREE_ACCEL_SHARE * campaign.stars.speed_mas_yr,
             wide: campaign.stars.foreground.map_or(
                 Wide {
-                    fraction: 0.02,
+                    fraction: 0.05,
                     speed_mas_yr: 2.0 * campaign.stars.speed_mas_yr,
                 },
                 |f| Wide {

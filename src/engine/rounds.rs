@@ -510,7 +510,7 @@ fn pairs(scene: &Scene, work: &Work, first: usize, second: usize) -> Vec<Vec<Pai
 }
 
 /// Rounds of the scheme.
-const ROUNDS: usize = 4;
+const ROUNDS: usize = 3;
 
 /// The whole search.
 pub fn run(scene: &mut Scene, observer: &dyn Observer) -> Work {

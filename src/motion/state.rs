@@ -175,20 +175,21 @@ impl Dynamics {
     }
 }
 
-/// Velocity: a Gaussian core and a long tail, a two-dimensional Student distribution with one
-/// degree of freedom, (1 + v^2/s^2)^(-3/2) / (2 pi s^2); acceleration: a Gaussian. The curvature
-/// is that of the component mix at hand (the weights of Lange, Little & Taylor 1989, JASA 84,
-/// 881; from memory), which keeps Newton steps safe.
+/// Velocity: a Gaussian core and a tail without a scale of its own, density as
+/// 1 / (1 + v^2 / s^2) up to [`TOP_SPEEDS`] s: beyond the core, each factor of two in speed is as
+/// likely as the next (Jeffreys 1939; from memory). Acceleration: a Gaussian. The curvature is
+/// that of the component mix at hand, which keeps Newton steps safe.
 fn free_prior(speed: f64, accel: f64, wide: Wide, p: &P6) -> Prior {
     let v2 = p[2] * p[2] + p[3] * p[3];
     let two_pi = 2.0 * std::f64::consts::PI;
     let s2 = wide.speed_mas_yr * wide.speed_mas_yr;
     let core =
         (1.0 - wide.fraction).ln() - two_pi.ln() - 2.0 * speed.ln() - 0.5 * v2 / (speed * speed);
-    let far = wide.fraction.ln() - two_pi.ln() - s2.ln() - 1.5 * (1.0 + v2 / s2).ln();
+    let norm = 0.5 * two_pi * s2 * (1.0 + TOP_SPEEDS * TOP_SPEEDS).ln();
+    let far = wide.fraction.ln() - norm.ln() - (1.0 + v2 / s2).ln();
     let total = crate::maths::lnprob::ln_add(core, far);
     let w = (core - total).exp();
-    let iv = w / (speed * speed) + (1.0 - w) * 3.0 / (s2 + v2);
+    let iv = w / (speed * speed) + (1.0 - w) * 2.0 / (s2 + v2);
     let ia = accel.powi(-2);
     let a2 = p[4] * p[4] + p[5] * p[5];
     let mut grad = P6::zeros();
