@@ -130,5 +130,5 @@ fn conclude(
 /// Gains are divided by this before beliefs are formed: models are never quite right.
 const BELIEF_TEMPERATURE: f64 = 2.0;
 /// P(real) of a track is 1 / (1 + exp(-(worth - middle) / width)).
-const REAL_MIDDLE_NATS: f64 = 4.0;
-const REAL_WIDTH_NATS: f64 = 6.0;
+const REAL_MIDDLE_NATS: f64 = 0.0;
+const REAL_WIDTH_NATS: f64 = 3.0;

@@ -18,6 +18,8 @@ use super::{flags, rivals, summary};
 
 /// Shares below this are not listed: the star has no part in the light that could be checked.
 pub const LEAST_SHARE: f64 = 0.06;
+/// Least belief in a membership of the best explanation.
+const LEAST_BELIEF: f64 = 0.4;
 /// Probability below which a membership counts as in doubt.
 pub const DOUBT: f64 = 0.9;
 
@@ -156,7 +158,9 @@ fn memberships(parts: &Parts) -> Vec<Member> {
                 if listed >= 2 {
                     f.set(Flags::MERGED);
                 }
-                let given = beliefs[e].of(d as u32, k as u32);
+                // The best explanation is what is listed; a smaller belief means that the last refit
+                // moved the prediction after the choice was made.
+                let given = beliefs[e].of(d as u32, k as u32).max(LEAST_BELIEF);
                 let mut p = given * real[k];
                 if listed >= 2 {
                     // A share of a blend is known only as far as the star's own place is.
