@@ -25,6 +25,9 @@ use super::transform::{
 use crate::maths::order;
 use crate::model::campaign::FrameFreedom;
 
+/// A star's own solution once the frames are known: inverse normal matrix, right side per axis.
+type BackSolve = (Matrix4<f64>, [Vector4<f64>; 2]);
+
 /// Rounds of reweighting.
 const ROUNDS: usize = 4;
 /// Stars eliminated per block of the matrix product.
@@ -317,7 +320,7 @@ impl<'a> Problem<'a> {
         let mut normal = DMatrix::zeros(n, n);
         let mut rhs = DVector::zeros(n);
         let mut block = DMatrix::zeros(n, 2 * TERMS * BLOCK);
-        let mut back: Vec<Option<(Matrix4<f64>, [Vector4<f64>; 2])>> = vec![None; self.stars.len()];
+        let mut back: Vec<Option<BackSolve>> = vec![None; self.stars.len()];
         let mut d = Design::default();
         for (chunk_no, chunk) in self.stars.chunks(BLOCK).enumerate() {
             block.fill(0.0);
@@ -654,7 +657,7 @@ impl<'a> Problem<'a> {
             .sum::<f64>()
             / n_stars)
             .sqrt();
-        if !(size > 0.0) {
+        if size.is_nan() || size <= 0.0 {
             return None;
         }
         let mut slopes = DMatrix::zeros(self.n_par, 12);
