@@ -56,20 +56,25 @@ pub fn link_lists(
         while moved > SETTLED && rounds < ROUNDS {
             observer.stage("settling the frames", None);
             let (next, by) = frame::refine(campaign, lists, &registered, &anchors(&solution))?;
-            (moved, rounds) = (by, rounds + 1);
-            if !settings.allow_unplaced {
-                refuse_unplaced(campaign, &next)?;
+            // A frame that was found is not given up because its secure tracks are few.
+            if next.unplaced().len() > registered.unplaced().len() {
+                break;
             }
+            (moved, rounds) = (by, rounds + 1);
             registered = next;
             solution = link(campaign, &registered.epochs, settings, observer)?;
         }
         registered.notes.push(Note {
             what: "frame_rounds",
             place: "common frame".to_owned(),
-            text: format!(
-                "solved {rounds} times after linking; the last time the maps moved by at most {moved:.2} of their errors ({})",
-                if moved <= SETTLED { "settled" } else { "stopped by the limit on rounds" }
-            ),
+            text: if rounds == 0 {
+                "not solved again after linking: too few secure tracks in some epoch".to_owned()
+            } else {
+                format!(
+                    "solved {rounds} times after linking; the last time the maps moved by at most {moved:.2} of their errors ({})",
+                    if moved <= SETTLED { "settled" } else { "stopped" }
+                )
+            },
         });
     }
     report(&registered, lists, &mut solution);
