@@ -112,7 +112,7 @@ fn conclude(
         tangles: groups
             .into_par_iter()
             .filter(|g| g.len() >= 2)
-            .map(|g| proof::prove(scene, &work, &choices, &g))
+            .map(|g| proof::prove(&work, &choices, &g))
             .collect::<Vec<Tangle>>(),
     };
     observer.stage("tables", None);

@@ -51,7 +51,6 @@ struct Member {
 #[must_use]
 pub fn assemble(parts: &Parts) -> Solution {
     let Parts {
-        campaign,
         epochs,
         scene,
         work,
@@ -101,7 +100,7 @@ pub fn assemble(parts: &Parts) -> Solution {
         })
         .collect();
     solution.leftovers = leftovers(parts, &members, &number);
-    solution.epochs = epoch_reports(campaign, epochs, scene, &solution);
+    solution.epochs = epoch_reports(epochs, scene, &solution);
     tangle_tables(parts, &number, &mut solution);
     solution
 }
@@ -333,12 +332,7 @@ fn leftovers(parts: &Parts, members: &[Member], number: &[usize]) -> Vec<Leftove
     out
 }
 
-fn epoch_reports(
-    campaign: &Campaign,
-    epochs: &[FieldEpoch],
-    scene: &Scene,
-    solution: &Solution,
-) -> Vec<EpochReport> {
+fn epoch_reports(epochs: &[FieldEpoch], scene: &Scene, solution: &Solution) -> Vec<EpochReport> {
     let mut reports: Vec<EpochReport> = scene
         .sights
         .iter()
@@ -365,7 +359,6 @@ fn epoch_reports(
             sum[m.epoch].1 += 2;
         }
     }
-    let _ = campaign;
     for (e, r) in reports.iter_mut().enumerate() {
         r.n_matched = seen[e].iter().filter(|h| **h).count();
         r.n_unmatched = r.n_list - r.n_matched;

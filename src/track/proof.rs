@@ -9,8 +9,7 @@ use crate::model::flag::Flags;
 use crate::model::result::Certificate;
 use crate::resolve::exact::{Budget, certify};
 use crate::resolve::joint::{Choices, Option_};
-use crate::resolve::program::{Builder, FALSE};
-use crate::resolve::scene::Scene;
+use crate::resolve::program::Builder;
 use crate::resolve::work::Work;
 
 use super::rivals::{self, Rivalry};
@@ -67,7 +66,7 @@ fn gain_without(options: &[Option_], group: &Option_, star: u32) -> f64 {
 
 /// Certify one group.
 #[must_use]
-pub fn prove(scene: &Scene, work: &Work, choices: &[Choices], stars: &[u32]) -> Tangle {
+pub fn prove(work: &Work, choices: &[Choices], stars: &[u32]) -> Tangle {
     let mut local = std::collections::BTreeMap::new();
     let mut builder = Builder::default();
     // The part of a track's worth that is not in its options: without the track its detections
@@ -122,7 +121,6 @@ pub fn prove(scene: &Scene, work: &Work, choices: &[Choices], stars: &[u32]) -> 
             }
         }
     }
-    let _ = (FALSE, scene);
     let (certificate, steps) = match certify(&program, &incumbent, &Budget::default()) {
         Ok(p) => (p.of_incumbent(), p.work),
         Err(_) => (Certificate::None, 0),
