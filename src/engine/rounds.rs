@@ -104,7 +104,7 @@ impl Tried {
 }
 
 /// Births from free detections, brightest first.
-pub fn births(scene: &Scene, work: &mut Work, joint: bool, tried: &mut Tried) -> (usize, usize) {
+pub fn births(scene: &Scene, work: &mut Work, joint: bool, tried: &mut Tried) {
     let mut anchors: Vec<(f64, usize, u32)> = Vec::new();
     for (e, s) in scene.sights.iter().enumerate() {
         if s.sensor.targeted {
@@ -120,8 +120,6 @@ pub fn births(scene: &Scene, work: &mut Work, joint: bool, tried: &mut Tried) ->
     anchors.sort_by(|a, b| a.0.total_cmp(&b.0).then((a.1, a.2).cmp(&(b.1, b.2))));
     let mut queue: std::collections::VecDeque<(usize, u32)> =
         anchors.into_iter().map(|a| (a.1, a.2)).collect();
-    let mut born = 0;
-    let mut twins = 0;
     let mut sc = Scratch::default();
     while !queue.is_empty() {
         let batch = next_batch(scene, work, &mut queue);
@@ -142,12 +140,8 @@ pub fn births(scene: &Scene, work: &mut Work, joint: bool, tried: &mut Tried) ->
                 BIRTH_NATS
             };
             if draft.worth <= least {
-                if joint
-                    && work.desks[e].groups[d as usize].is_empty()
-                    && grow::joint_birth(scene, work, &draft, least, &mut sc).is_some()
-                {
-                    born += 1;
-                    twins += 1;
+                if joint && work.desks[e].groups[d as usize].is_empty() {
+                    grow::joint_birth(scene, work, &draft, least, &mut sc);
                 }
                 continue;
             }
@@ -163,10 +157,8 @@ pub fn births(scene: &Scene, work: &mut Work, joint: bool, tried: &mut Tried) ->
                 continue;
             }
             work.add(scene, draft.star);
-            born += 1;
         }
     }
-    (born, twins)
 }
 
 /// Anchors of one batch.
@@ -293,7 +285,7 @@ enum Verdict {
 /// Revision: weak stars die or are regrown from their own clean detections. Stars are judged
 /// in batches of such as lie far apart, so that no verdict rests on a neighbour judged at the
 /// same time (two copies of a doubled star must not both die).
-pub fn revise(scene: &Scene, work: &mut Work) -> (usize, usize) {
+pub fn revise(scene: &Scene, work: &mut Work) {
     let worths: Vec<f64> = {
         let frozen = &*work;
         (0..work.stars.len() as u32)
@@ -308,7 +300,6 @@ pub fn revise(scene: &Scene, work: &mut Work) -> (usize, usize) {
             .then(a.cmp(&b))
     });
     let mut queue: std::collections::VecDeque<u32> = order.into();
-    let (mut died, mut regrown) = (0, 0);
     let mut dead = vec![false; work.stars.len()];
     while !queue.is_empty() {
         let batch = far_apart(scene, work, &mut queue);
@@ -321,12 +312,10 @@ pub fn revise(scene: &Scene, work: &mut Work) -> (usize, usize) {
             match verdict {
                 Verdict::Kept => {}
                 Verdict::Regrown(star) => {
-                    regrown += 1;
                     work.withdraw(k);
                     work.replace(scene, k, *star);
                 }
                 Verdict::Dead => {
-                    died += 1;
                     dead[k as usize] = true;
                     work.withdraw(k);
                 }
@@ -334,7 +323,6 @@ pub fn revise(scene: &Scene, work: &mut Work) -> (usize, usize) {
         }
     }
     compact(scene, work, |k, _| !dead[k]);
-    (died, regrown)
 }
 
 fn death_worth(scene: &Scene, work: &Work, k: u32, sc: &mut Scratch) -> f64 {

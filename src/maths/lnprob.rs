@@ -32,16 +32,6 @@ pub fn logistic(x: f64) -> f64 {
     }
 }
 
-/// ln(1 / (1 + exp(-x))), stable for large |x|.
-#[must_use]
-pub fn ln_logistic(x: f64) -> f64 {
-    if x >= 0.0 {
-        -(-x).exp().ln_1p()
-    } else {
-        x - x.exp().ln_1p()
-    }
-}
-
 /// Logarithm of the normal density.
 #[must_use]
 pub fn ln_normal(d: f64, var: f64) -> f64 {

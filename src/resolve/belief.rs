@@ -79,24 +79,20 @@ impl Sum<'_> {
         }
         let d = self.dets[k] as usize;
         for (i, o) in self.opts[d].iter().enumerate() {
-            if o.stars.members().iter().any(|&m| self.taken[m as usize]) {
+            if o.stars.touches(self.taken) {
                 continue;
             }
-            for &m in o.stars.members() {
-                self.taken[m as usize] = true;
-            }
+            o.stars.mark(self.taken, true);
             self.pick[k] = Some(i);
             self.go(k + 1, gain + o.gain);
             self.pick[k] = None;
-            for &m in o.stars.members() {
-                self.taken[m as usize] = false;
-            }
+            o.stars.mark(self.taken, false);
         }
         self.go(k + 1, gain);
     }
 }
 
-/// Beliefs of one epoch; `flatten` divides all gains (a temperature above one widens).
+/// Beliefs of one epoch; all gains are divided by `temperature` (above one it widens).
 #[must_use]
 pub fn beliefs(choices: &Choices, n_stars: usize, temperature: f64) -> Beliefs {
     let mut out = Beliefs {

@@ -245,18 +245,14 @@ impl Search<'_> {
             if gain + o.gain + self.rest[k + 1] <= self.best_gain + 1e-12 {
                 break;
             }
-            if o.stars.members().iter().any(|&m| self.taken[m as usize]) {
+            if o.stars.touches(self.taken) {
                 continue;
             }
-            for &m in o.stars.members() {
-                self.taken[m as usize] = true;
-            }
+            o.stars.mark(self.taken, true);
             self.pick[k] = Some(i);
             self.go(k + 1, gain + o.gain);
             self.pick[k] = None;
-            for &m in o.stars.members() {
-                self.taken[m as usize] = false;
-            }
+            o.stars.mark(self.taken, false);
         }
         self.go(k + 1, gain);
     }

@@ -124,6 +124,17 @@ impl Group {
             self.n -= 1;
         }
     }
+    /// Is any of these stars marked?
+    #[must_use]
+    pub fn touches(&self, marks: &[bool]) -> bool {
+        self.members().iter().any(|&m| marks[m as usize])
+    }
+    /// Marks all of these stars, or clears their marks.
+    pub fn mark(&self, marks: &mut [bool], value: bool) {
+        for &m in self.members() {
+            marks[m as usize] = value;
+        }
+    }
     #[must_use]
     pub fn has(&self, k: u32) -> bool {
         self.members().contains(&k)

@@ -2,8 +2,8 @@
 //!
 //! P_D(m) = top / (1 + exp((m - m50) / width)), times the chance of standing out from the light
 //! of brighter neighbours, 1 / (1 + (H / F)^2) with H the wing light at the place. The wing is
-//! followed as halo x (s / fwhm)^-3 of the neighbour's flux. Starting values: the 85th
-//! percentile of a list (stated limits describe a whole field, crowded centre included);
+//! followed as halo x (s / fwhm)^-3 of the neighbour's flux. Starting value of m50: a
+//! tenth of a magnitude beyond the 90th percentile of a list (stated limits describe a whole field, crowded centre included);
 //! refined by logistic regression on hits and misses of tracks, shrunk towards the start.
 
 use crate::maths::lnprob::logistic;

@@ -1,8 +1,8 @@
 //! Density of false detections per mas^2 and magnitude.
 //!
-//! lambda(m, place) = share x (density of all detections there and at that magnitude), plus a
-//! uniform floor: unknown faint stars and artefacts crowd where stars crowd. The local density
-//! is measured over all epochs of an instrument, the share estimated from the leftovers.
+//! lambda(m, place) = share x (density of all detections there and at that magnitude): unknown
+//! faint stars and artefacts crowd where stars crowd. The density is that of the epoch's own
+//! list; the share, one per instrument, leans on a fixed start and a little on the leftovers.
 
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub struct FalseLaw {

@@ -3,7 +3,8 @@
 //! P(merged | s, dm) = top / (1 + exp((s / fwhm - limit - slope min(|dm|, 6)) / width)): half of the
 //! pairs merge at limit + slope |dm|. (For equal Gaussian profiles two peaks need
 //! s > 0.85 fwhm; fitting with a known profile goes lower, plain peak finding does not.)
-//! Parameters per instrument, estimated from pairs of tracks seen merged and apart.
+//! Limit and width are estimated per instrument from pairs of like tracks seen merged and apart,
+//! the limit only near its start; the slope is fixed.
 
 use crate::maths::lnprob::logistic;
 
