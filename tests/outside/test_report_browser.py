@@ -170,6 +170,8 @@ def test_keyboard_opens_a_track(tab, report):
     tab.key("n", "KeyN", "n")
     tab.key("Enter")
     tab.wait("location.hash.startsWith('#/track/')")
+    # The address changes before the page is drawn: wait for the page's own word that it is.
+    tab.wait("document.documentElement.dataset.shown.startsWith('track/')")
     assert tab.run("document.querySelector('h1').textContent") in [t["track"] for t in report.tracks]
 
 
