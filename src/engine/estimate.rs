@@ -8,7 +8,7 @@ use rayon::prelude::*;
 use crate::maths::order;
 use crate::resolve::scene::Scene;
 use crate::resolve::star::Cell;
-use crate::resolve::work::Work;
+use crate::resolve::work::{Desk, Work};
 use crate::sensor::blend::{self, flux_of, mag_of};
 use crate::sensor::depth::{self, Depth, Event};
 use crate::sensor::errors::ErrorLaw;
@@ -21,6 +21,10 @@ use super::prepare::apply_laws;
 const DEFAULT_WEIGHT: f64 = 60.0;
 /// Median of a chi-square with two degrees of freedom, 2 ln 2.
 const MEDIAN_CHI2_2: f64 = 1.386_294_361_119_891;
+
+/// ln(1 - chance of being listed) below which a star is missed so rarely that not to be listed
+/// apart speaks of a merger (one in ten).
+const SURE_TO_BE_SEEN: f64 = -2.3;
 
 /// A clean detection of a well-known star.
 struct Clean {
@@ -45,7 +49,7 @@ struct Mixed {
 struct Harvest {
     clean: Vec<Clean>,
     mixed: Vec<Mixed>,
-    pairs: Vec<PairEvent>,
+    pairs: Vec<((u32, u32), PairEvent)>,
     depth: Vec<Event>,
     free: usize,
     total: usize,
@@ -78,11 +82,18 @@ pub fn laws(scene: &mut Scene, work: &Work) {
             scene.sights[of[0]].sensor.fwhm_mas,
             &all,
         );
-        let events: Vec<PairEvent> = of
-            .iter()
-            .flat_map(|&e| harvests[e].pairs.iter().copied())
-            .collect();
-        let law = pairs::refit(PairLaw::start(), &events);
+        let events = weighted(
+            of.iter()
+                .flat_map(|&e| harvests[e].pairs.iter().copied())
+                .collect(),
+        );
+        let mut law = pairs::refit(PairLaw::start(), &events);
+        if let Some(v) = std::env::var("LIM").ok().and_then(|v| v.parse::<f64>().ok()) { law.limit_fwhm = v; law.slope_fwhm = 0.09; law.width_fwhm = 0.04; }
+        if std::env::var("EVENTS").is_ok() {
+            let mut h = vec![(0, 0); 20];
+            for e in &events { let b = (e.sep_fwhm / 0.1) as usize; if b < 20 { if e.merged { h[b].0 += 1 } else { h[b].1 += 1 } } }
+            eprintln!("instr {i} law {law:?} events {h:?}");
+        }
         let free: usize = of.iter().map(|&e| harvests[e].free).sum();
         let total: usize = of.iter().map(|&e| harvests[e].total).sum();
         // Three parts default, one part leftovers: many of these are stars not yet found.
@@ -168,6 +179,9 @@ fn harvest(scene: &Scene, work: &Work, e: usize) -> Harvest {
             if o.cov.max_var().sqrt() > 0.12 * f || o.mag_var > 0.05 {
                 continue;
             }
+            if !lonely_pair(desk, k as u32, q, 1.8 * f) {
+                continue;
+            }
             let merged = match (cell, work.stars[q as usize].cells[e]) {
                 (Cell::Shared(a), Cell::Shared(b)) if a == b => true,
                 (a, b) if a.detection().is_some() && b.detection().is_some() => false,
@@ -176,12 +190,15 @@ fn harvest(scene: &Scene, work: &Work, e: usize) -> Harvest {
             let dmag = p.mag - o.mag;
             // Only the light of like stars tells whether they are one: a merger of others is
             // believed because the law says so, and must not teach the law.
-            if dmag.abs() < 1.2 {
-                h.pairs.push(PairEvent {
+            if dmag.abs() < 1.2 && p.ln_miss.max(o.ln_miss) < SURE_TO_BE_SEEN {
+                let event = PairEvent {
                     sep_fwhm: (p.x - o.x).hypot(p.y - o.y) / f,
                     dmag,
+                    sigma_fwhm: (0.5 * (p.cov.xx + p.cov.yy + o.cov.xx + o.cov.yy)).sqrt() / f,
                     merged,
-                });
+                    weight: 1.0,
+                };
+                h.pairs.push(((k as u32, q), event));
             }
         }
     }
@@ -211,6 +228,34 @@ fn harvest(scene: &Scene, work: &Work, e: usize) -> Harvest {
         });
     }
     h
+}
+
+/// Most weight that one pair of stars may have.
+const PAIR_WEIGHT: f64 = 4.0;
+
+/// The events of an instrument, those of each pair sharing at most [`PAIR_WEIGHT`].
+fn weighted(mut events: Vec<((u32, u32), PairEvent)>) -> Vec<PairEvent> {
+    events.sort_by_key(|e| e.0);
+    for of_pair in events.chunk_by_mut(|a, b| a.0 == b.0) {
+        let weight = (PAIR_WEIGHT / of_pair.len() as f64).min(1.0);
+        for (_, e) in of_pair {
+            e.weight = weight;
+        }
+    }
+    events.into_iter().map(|e| e.1).collect()
+}
+
+/// No third star near that could join the two: in a chain the ends are one detection at any
+/// separation, which says nothing of a pair.
+fn lonely_pair(desk: &Desk, k: u32, q: u32, reach_mas: f64) -> bool {
+    let (a, b) = (&desk.preds[k as usize], &desk.preds[q as usize]);
+    let faintest = a.mag.max(b.mag) + 2.5;
+    let mut near = Vec::new();
+    [a, b].iter().all(|p| {
+        desk.grid.within(&desk.preds, p.x, p.y, reach_mas, &mut near);
+        near.iter()
+            .all(|&o| o == k || o == q || desk.preds[o as usize].mag > faintest)
+    })
 }
 
 /// Ratio by which a variance must change so that the median chi-square is right, shrunk to one.

@@ -29,6 +29,7 @@ pub fn refresh(scene: &Scene, work: &mut Work) {
             star,
             |e| pred(e).map_or(0.0, |p| p.press),
             |e| pred(e).map_or(1.0, |p| p.contrast),
+            (desks, Some(k as u32)),
             15,
         );
     });

@@ -96,6 +96,21 @@ fn add_row(a: &mut M6, b: &mut P6, h: &H26, w: Cov2, dx: f64, dy: f64) {
 /// Fit from a start; `None` only when the matrices are not finite.
 #[must_use]
 pub fn fit(dynamics: &Dynamics, obs: &[Obs], t0: f64, start: &P6, max_steps: usize) -> Option<Fit> {
+    fit_with(dynamics, obs, obs.len(), t0, start, max_steps)
+}
+
+/// Fit to all positions, with the evidence of the first `n_clean` alone: the rest (places
+/// worked out from blends) help to find the motion, but what they say for the star is counted
+/// where blends are priced.
+#[must_use]
+pub fn fit_with(
+    dynamics: &Dynamics,
+    obs: &[Obs],
+    n_clean: usize,
+    t0: f64,
+    start: &P6,
+    max_steps: usize,
+) -> Option<Fit> {
     let mut p = *start;
     let mut n = normal_equations(dynamics, obs, t0, &p);
     let mut prior = dynamics.prior(&p);
@@ -135,16 +150,23 @@ pub fn fit(dynamics: &Dynamics, obs: &[Obs], t0: f64, start: &P6, max_steps: usi
             break;
         }
     }
+    let cov = (n.a + prior.curv).cholesky()?.inverse();
+    if n_clean < obs.len() {
+        n = normal_equations(dynamics, &obs[..n_clean], t0, &p);
+    }
     let a = n.a + prior.curv;
     let ch = a.cholesky()?;
     let ln_det: f64 = 2.0 * (0..6).map(|k| ch.l_dirty()[(k, k)].ln()).sum::<f64>();
-    let cov = ch.inverse();
-    let ln_evidence = value + 3.0 * (2.0 * std::f64::consts::PI).ln() - 0.5 * ln_det
-        + if dynamics.is_central() {
-            std::f64::consts::LN_2
-        } else {
-            0.0
-        };
+    let mut ln_evidence =
+        n.ln_like + prior.ln + 3.0 * (2.0 * std::f64::consts::PI).ln() - 0.5 * ln_det;
+    if n_clean < obs.len() {
+        // The maximum of the clean positions alone lies a Newton step away.
+        let b = n.b + prior.grad;
+        ln_evidence += 0.5 * b.dot(&ch.solve(&b));
+    }
+    if dynamics.is_central() {
+        ln_evidence += std::f64::consts::LN_2;
+    }
     ln_evidence.is_finite().then_some(Fit {
         t0_yr: t0,
         p,
@@ -153,7 +175,7 @@ pub fn fit(dynamics: &Dynamics, obs: &[Obs], t0: f64, start: &P6, max_steps: usi
         ln_prior: prior.ln,
         ln_evidence,
         chi2: n.chi2,
-        n: obs.len(),
+        n: n_clean,
     })
 }
 

@@ -128,8 +128,7 @@ fn pair_chance(s: &Sight, a: &Pred, b: &Pred) -> f64 {
     let f = s.sensor.fwhm_mas;
     let sep = (a.x - b.x).hypot(a.y - b.y) / f;
     let var = 0.5 * (a.cov.xx + a.cov.yy + b.cov.xx + b.cov.yy) / (f * f);
-    let mut law = s.sensor.pairs;
-    law.width_fwhm = law.width_fwhm.hypot(0.6 * var.sqrt().min(1.0));
+    let law = s.sensor.pairs.blurred(var.sqrt());
     law.merged(sep, a.mag - b.mag)
 }
 

@@ -214,6 +214,7 @@ pub fn grow(
         mag: mag0,
         mag_var: s0.mag_var[d0 as usize],
         cells: vec![Cell::Out; n_epoch],
+        blends: Vec::new(),
         worth: 0.0,
     };
     let mut visited = vec![false; n_epoch];
@@ -297,6 +298,7 @@ pub fn finish(
             return None;
         }
         let t0 = star.fit.t0_yr;
+        star.blends.clear();
         star.fit = best_fit(&scene.dynamics, &sc.obs, t0, &star.fit.p, pass == 0)?;
         let contrast: Vec<f64> = preds.iter().map(|p| p.contrast).collect();
         let (m, v, _) = work::magnitude(scene, &star.cells, |e| contrast[e]).unwrap_or((
@@ -323,11 +325,15 @@ pub fn finish(
         return None;
     }
     let t0 = star.fit.t0_yr;
-    star.fit = state_fit::fit(&scene.dynamics, &sc.obs, t0, &star.fit.p, 20)?;
+    let n_alone = sc.obs.len();
+    let mut blends = std::mem::take(&mut star.blends);
+    work::blend_places(scene, &work.desks, &star, own, &mut blends);
+    star.blends = blends;
+    sc.obs.extend(star.blends.iter().map(|b| b.1));
+    star.fit = state_fit::fit_with(&scene.dynamics, &sc.obs, n_alone, t0, &star.fit.p, 20)?;
     let parts = worth(scene, work, &star, own, sc);
     let worth = parts.hopeful(3.0);
     star.worth = parts.total();
-    let n_alone = sc.obs.len();
     Some(Draft {
         star,
         worth,
@@ -545,7 +551,8 @@ pub fn joint_birth(
         return None;
     }
     recentre(scene, &mut changed);
-    if !work::refit(scene, &mut changed, |_| 0.0, |_| 1.0, 20) {
+    let desks = (work.desks.as_slice(), Some(a));
+    if !work::refit(scene, &mut changed, |_| 0.0, |_| 1.0, desks, 20) {
         return None;
     }
     let undo = |work: &mut Work, old: Star| {

@@ -1,7 +1,7 @@
 //! A track at work: its motion, magnitude and what it is at every epoch.
 
 use crate::maths::cov2::Cov2;
-use crate::motion::state_fit::Fit;
+use crate::motion::state_fit::{Fit, Obs};
 
 /// Most stars that may share one detection.
 pub const MAX_GROUP: usize = 5;
@@ -37,6 +37,8 @@ pub struct Star {
     /// Variance of the mean magnitude.
     pub mag_var: f64,
     pub cells: Vec<Cell>,
+    /// Places worked out from blends that took part in the fit: (epoch, place), by epoch.
+    pub blends: Vec<(u32, Obs)>,
     /// Evidence with everything else fixed \[nats\], from the last revision.
     pub worth: f64,
 }

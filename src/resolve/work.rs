@@ -3,10 +3,10 @@
 use super::cost;
 use super::grid::Grid;
 use super::scene::Scene;
-use super::star::{Cell, Group, Pred, Star};
+use super::star::{Cell, Group, MAX_GROUP, Pred, Star};
 use crate::maths::cov2::Cov2;
 use crate::motion::state_fit::{self, Obs, core_wing};
-use crate::sensor::blend::flux_of;
+use crate::sensor::blend::{self, flux_of};
 
 /// One epoch's predictions and holders.
 #[derive(Clone, Debug, Default)]
@@ -98,7 +98,32 @@ impl Work {
     }
 }
 
-/// Prediction of a star at an epoch, its own clean detection there left out.
+/// A fitted place with one of the positions that made it taken out again.
+fn without((x, y): (f64, f64), cov: Cov2, own: &Obs) -> ((f64, f64), Cov2) {
+    let (dx, dy) = (own.x_mas - x, own.y_mas - y);
+    let w = own
+        .cov
+        .inverse()
+        .scaled(core_wing(own.cov.chi2(dx, dy), 0.0).1);
+    let full = cov.inverse();
+    let less = Cov2 {
+        xx: full.xx - w.xx,
+        xy: full.xy - w.xy,
+        yy: full.yy - w.yy,
+    };
+    if less.xx <= 0.02 * full.xx || less.yy <= 0.02 * full.yy || less.det() <= 4e-4 * full.det() {
+        return ((x, y), cov.scaled(50.0));
+    }
+    let out = less.inverse();
+    let bx = full.xx * x + full.xy * y - w.xx * own.x_mas - w.xy * own.y_mas;
+    let by = full.xy * x + full.yy * y - w.xy * own.x_mas - w.yy * own.y_mas;
+    (
+        (out.xx * bx + out.xy * by, out.xy * bx + out.yy * by),
+        out,
+    )
+}
+
+/// Prediction of a star at an epoch, its own detection there left out.
 #[must_use]
 pub fn predict(scene: &Scene, e: usize, star: &Star, press: f64) -> Pred {
     let s = &scene.sights[e];
@@ -107,30 +132,20 @@ pub fn predict(scene: &Scene, e: usize, star: &Star, press: f64) -> Pred {
         return Pred::NONE;
     }
     let (mut mag, mut mag_var) = (star.mag, star.mag_var);
-    if let Cell::Alone(d) = star.cells[e] {
+    if let Ok(i) = star.blends.binary_search_by_key(&(e as u32), |b| b.0) {
+        ((x, y), cov) = without((x, y), cov, &star.blends[i].1);
+    } else if let Cell::Alone(d) = star.cells[e] {
         let d = d as usize;
-        let r = s
-            .sensor
-            .errors
-            .position(s.data.cov_mas2[d], press, s.sensor.fwhm_mas);
-        let (dx, dy) = (s.data.x_mas[d] - x, s.data.y_mas[d] - y);
-        let w = r.inverse().scaled(core_wing(r.chi2(dx, dy), 0.0).1);
-        let full = cov.inverse();
-        let less = Cov2 {
-            xx: full.xx - w.xx,
-            xy: full.xy - w.xy,
-            yy: full.yy - w.yy,
+        let own = Obs {
+            t_yr: s.t_yr,
+            x_mas: s.data.x_mas[d],
+            y_mas: s.data.y_mas[d],
+            cov: s
+                .sensor
+                .errors
+                .position(s.data.cov_mas2[d], press, s.sensor.fwhm_mas),
         };
-        if less.xx > 0.02 * full.xx && less.yy > 0.02 * full.yy && less.det() > 4e-4 * full.det() {
-            let out = less.inverse();
-            let bx = full.xx * x + full.xy * y - w.xx * s.data.x_mas[d] - w.xy * s.data.y_mas[d];
-            let by = full.xy * x + full.yy * y - w.xy * s.data.x_mas[d] - w.yy * s.data.y_mas[d];
-            x = out.xx * bx + out.xy * by;
-            y = out.xy * bx + out.yy * by;
-            cov = out;
-        } else {
-            cov = cov.scaled(50.0);
-        }
+        ((x, y), cov) = without((x, y), cov, &own);
         if s.mag[d].is_finite() {
             let wm = 1.0 / s.mag_var[d];
             let full = 1.0 / mag_var;
@@ -244,6 +259,96 @@ pub fn observation(scene: &Scene, e: usize, d: usize, press: f64) -> Obs {
     }
 }
 
+/// Least share of a blend's light from which a star's own place is worked out.
+const LEAST_PART: f64 = 0.25;
+
+/// Places of a star worked out from the blends it is part of: what is left of a blend's place
+/// once the other members' parts are taken away (Cov grows as the inverse square of the share).
+pub fn blend_places(
+    scene: &Scene,
+    desks: &[Desk],
+    star: &Star,
+    own: Option<u32>,
+    out: &mut Vec<(u32, Obs)>,
+) {
+    out.clear();
+    for (e, cell) in star.cells.iter().enumerate() {
+        if let Cell::Shared(d) = *cell
+            && let Some(o) = blend_place(scene, e, d as usize, &desks[e], star, own)
+        {
+            out.push((e as u32, o));
+        }
+    }
+}
+
+fn blend_place(
+    scene: &Scene,
+    e: usize,
+    d: usize,
+    desk: &Desk,
+    star: &Star,
+    own: Option<u32>,
+) -> Option<Obs> {
+    let s = &scene.sights[e];
+    let sn = &s.sensor;
+    let mut xy = [[0.0; 2]; MAX_GROUP];
+    let mut flux = [0.0; MAX_GROUP];
+    let mut part = [0.0; MAX_GROUP];
+    let mut others = [0u32; MAX_GROUP];
+    let ((x, y), _) = star.fit.predict(&scene.dynamics, s.t_yr);
+    xy[0] = [x, y];
+    flux[0] = flux_of(star.mag);
+    let mut n = 1;
+    for &k in desk.groups[d].members() {
+        if Some(k) == own || n == MAX_GROUP {
+            continue;
+        }
+        let p = &desk.preds[k as usize];
+        if !p.active {
+            return None;
+        }
+        xy[n] = [p.x, p.y];
+        flux[n] = p.flux;
+        others[n] = k;
+        n += 1;
+    }
+    if n < 2 {
+        return None;
+    }
+    let b = blend::place(sn.blend, sn.fwhm_mas, &xy[..n], &flux[..n], &mut part[..n]);
+    let w = part[0];
+    if w < LEAST_PART {
+        return None;
+    }
+    let (mut px, mut py) = (s.data.x_mas[d], s.data.y_mas[d]);
+    let mut cov = sn.errors.position(s.data.cov_mas2[d], 0.0, sn.fwhm_mas);
+    let mut spread2 = 0.0;
+    let mut light = 0.0;
+    for i in 0..n {
+        spread2 += part[i] * ((xy[i][0] - b.x_mas).powi(2) + (xy[i][1] - b.y_mas).powi(2));
+        if i > 0 {
+            let p = &desk.preds[others[i] as usize];
+            px -= part[i] * xy[i][0];
+            py -= part[i] * xy[i][1];
+            cov += p.cov.scaled(part[i] * part[i]);
+            // A magnitude error of the pair moves the shares.
+            let dm2 = p.mag_var + star.mag_var + sn.errors.blend_mag.powi(2);
+            let off2 = (xy[i][0] - x).powi(2) + (xy[i][1] - y).powi(2);
+            light += (part[i] * w).powi(2) * 0.85 * dm2 * off2;
+        }
+    }
+    let main = part[..n].iter().copied().fold(0.0, f64::max);
+    let mixed = (3.0 * (1.0 - main)).min(1.0);
+    let model = mixed * (sn.errors.blend_fwhm * sn.fwhm_mas + 0.15 * spread2.sqrt());
+    cov += Cov2::round(model * model + light);
+    Some(Obs {
+        t_yr: s.t_yr,
+        x_mas: px / w,
+        y_mas: py / w,
+        cov: cov.scaled(1.0 / (w * w)),
+    })
+}
+
 /// Magnitude of a star from its clean detections and its misses; (mag, variance, ln evidence).
 #[must_use]
 pub fn magnitude(
@@ -321,6 +426,7 @@ pub fn refit(
     star: &mut Star,
     press: impl Fn(usize) -> f64,
     contrast: impl Fn(usize) -> f64,
+    (desks, own): (&[Desk], Option<u32>),
     steps: usize,
 ) -> bool {
     let mut obs = Vec::with_capacity(star.cells.len());
@@ -328,7 +434,19 @@ pub fn refit(
     if obs.is_empty() {
         return false;
     }
-    if let Some(f) = state_fit::fit(&scene.dynamics, &obs, star.fit.t0_yr, &star.fit.p, steps) {
+    let n_clean = obs.len();
+    let mut blends = std::mem::take(&mut star.blends);
+    blend_places(scene, desks, star, own, &mut blends);
+    star.blends = blends;
+    obs.extend(star.blends.iter().map(|b| b.1));
+    if let Some(f) = state_fit::fit_with(
+        &scene.dynamics,
+        &obs,
+        n_clean,
+        star.fit.t0_yr,
+        &star.fit.p,
+        steps,
+    ) {
         star.fit = f;
     }
     if let Some((m, v, _)) = magnitude(scene, &star.cells, contrast) {

@@ -43,6 +43,14 @@ impl PairLaw {
         (top * logistic((limit - sep_fwhm) / self.width_fwhm)).max(BOTTOM)
     }
 
+    /// The law for a separation that is known with an error only. (A logistic step of width w
+    /// averaged over a Gaussian of width s is close to one of width sqrt(w^2 + (0.6 s)^2).)
+    #[must_use]
+    pub fn blurred(mut self, sigma_fwhm: f64) -> Self {
+        self.width_fwhm = self.width_fwhm.hypot(0.6 * sigma_fwhm.min(1.0));
+        self
+    }
+
     /// Separation \[fwhm\] beyond which merging can be ignored.
     #[must_use]
     pub fn reach_fwhm(&self) -> f64 {
@@ -55,8 +63,17 @@ impl PairLaw {
 pub struct PairEvent {
     pub sep_fwhm: f64,
     pub dmag: f64,
+    /// Error of the separation along the line that joins the two.
+    pub sigma_fwhm: f64,
     pub merged: bool,
+    /// Weight of the event, at most one: a pair that is seen again and again in the same state is
+    /// not many witnesses.
+    pub weight: f64,
 }
+
+/// Share of pairs whose fate is misjudged: a star that is not known joins two that are apart,
+/// or stands in for one of them.
+const MISJUDGED: f64 = 0.06;
 
 /// Refit to events, shrunk towards the start (one pseudo-observation per parameter).
 #[must_use]
@@ -65,8 +82,9 @@ pub fn refit(start: PairLaw, events: &[PairEvent]) -> PairLaw {
         let ln: f64 = events
             .iter()
             .map(|e| {
-                let p = l.merged(e.sep_fwhm, e.dmag).clamp(0.01, 0.985);
-                if e.merged { p.ln() } else { (1.0 - p).ln() }
+                let p = l.blurred(e.sigma_fwhm).merged(e.sep_fwhm, e.dmag);
+                let p = MISJUDGED + (1.0 - 2.0 * MISJUDGED) * p;
+                e.weight * if e.merged { p.ln() } else { (1.0 - p).ln() }
             })
             .sum();
         let a = (l.limit_fwhm - start.limit_fwhm) / 0.12;
@@ -81,7 +99,7 @@ pub fn refit(start: PairLaw, events: &[PairEvent]) -> PairLaw {
             for k in -3i32..=3 {
                 let t = PairLaw {
                     limit_fwhm: (o.limit_fwhm + 0.1 * step * f64::from(k))
-                        .clamp(start.limit_fwhm - 0.15, start.limit_fwhm + 0.15),
+                        .clamp(start.limit_fwhm - 0.25, start.limit_fwhm + 0.25),
                     ..best.1
                 };
                 let s = score(&t);

@@ -149,7 +149,8 @@ fn memberships(parts: &Parts) -> Vec<Member> {
             for (i, &k) in stars.iter().enumerate() {
                 let part = flux[i] / total;
                 let far = (xy[i][0] - b.x_mas).hypot(xy[i][1] - b.y_mas) / s.sensor.fwhm_mas;
-                if n > 1 && (part < LEAST_SHARE || far > 0.8) {
+                let env = |s: &str, d: f64| std::env::var(s).ok().and_then(|v| v.parse::<f64>().ok()).unwrap_or(d);
+                if n > 1 && (part < env("LS", LEAST_SHARE) || far > env("FAR", 0.8)) {
                     continue;
                 }
                 let k = k as usize;
@@ -172,6 +173,9 @@ fn memberships(parts: &Parts) -> Vec<Member> {
                     if flags::flux_jump(s.mag[d] - mag, var) {
                         f.set(Flags::FLUX_JUMP);
                     }
+                }
+                if n > 1 && p < env("PMIN", 0.0) {
+                    continue;
                 }
                 if p < DOUBT {
                     f.set(Flags::AMBIGUOUS);

@@ -73,9 +73,11 @@ pub fn fitted(run: Linked<'_>) -> Vec<EpochLaw> {
             let rows = [a, b].map(|k| row_of.get(&(e, tracks[k].0)));
             if let [Some(ra), Some(rb)] = rows {
                 of_instrument[epoch.instrument].push(PairEvent {
+                    sigma_fwhm: 0.0,
                     sep_fwhm: pair.dist_mas / epoch.fwhm_mas,
                     dmag: tracks[a].2 - tracks[b].2,
                     merged: ra == rb,
+                    weight: 1.0,
                 });
             }
         }
