@@ -5,9 +5,13 @@
 
 use rayon::prelude::*;
 
+use crate::maths::cov2::Cov2;
 use crate::maths::order;
-use crate::resolve::scene::Scene;
-use crate::resolve::star::Cell;
+use crate::model::campaign::BlendLaw;
+use crate::motion::state_fit::core_wing;
+use crate::resolve::cost;
+use crate::resolve::scene::{Scene, Sight};
+use crate::resolve::star::{Cell, Pred};
 use crate::resolve::work::{Desk, Work};
 use crate::sensor::blend::{self, flux_of, mag_of};
 use crate::sensor::depth::{self, Depth, Event};
@@ -51,6 +55,8 @@ struct Harvest {
     mixed: Vec<Mixed>,
     pairs: Vec<((u32, u32), PairEvent)>,
     depth: Vec<Event>,
+    /// By how much each telling blend is likelier as a centroid than as a profile fit \[nats\].
+    centroid: Vec<((u32, u32), f64)>,
     free: usize,
     total: usize,
 }
@@ -87,21 +93,19 @@ pub fn laws(scene: &mut Scene, work: &Work) {
                 .flat_map(|&e| harvests[e].pairs.iter().copied())
                 .collect(),
         );
-        let mut law = pairs::refit(PairLaw::start(), &events);
-        if let Some(v) = std::env::var("LIM").ok().and_then(|v| v.parse::<f64>().ok()) { law.limit_fwhm = v; law.slope_fwhm = 0.09; law.width_fwhm = 0.04; }
-        if std::env::var("EVENTS").is_ok() {
-            let mut h = vec![(0, 0); 20];
-            for e in &events { let b = (e.sep_fwhm / 0.1) as usize; if b < 20 { if e.merged { h[b].0 += 1 } else { h[b].1 += 1 } } }
-            eprintln!("instr {i} law {law:?} events {h:?}");
-        }
+        let law = pairs::refit(PairLaw::start(), &events);
         let free: usize = of.iter().map(|&e| harvests[e].free).sum();
         let total: usize = of.iter().map(|&e| harvests[e].total).sum();
         // Three parts default, one part leftovers: many of these are stars not yet found.
         let start = FalseLaw::start().share;
         let share = (0.75 * start + 0.25 * free as f64 / total.max(1) as f64)
             .clamp(0.5 * start, 1.5 * start);
+        let blend = blend_law(of.iter().flat_map(|&e| &harvests[e].centroid));
         for &e in &of {
             let s = &mut scene.sights[e];
+            if let Some(law) = blend.filter(|_| !s.sensor.blend_stated) {
+                s.sensor.blend = law;
+            }
             s.sensor.errors = errors;
             s.sensor.pairs = law;
             s.sensor.falses.share = share;
@@ -139,7 +143,7 @@ fn harvest(scene: &Scene, work: &Work, e: usize) -> Harvest {
         total: s.len(),
         ..Harvest::default()
     };
-    h.free = desk.groups.iter().filter(|g| g.is_empty()).count();
+    h.free = s.len() - desk.holders.held().count();
     let mut near = Vec::new();
     for (k, p) in desk.preds.iter().enumerate() {
         if !p.active || p.cov.max_var().sqrt() > 0.12 * f || p.mag_var > 0.05 {
@@ -202,7 +206,7 @@ fn harvest(scene: &Scene, work: &Work, e: usize) -> Harvest {
             }
         }
     }
-    for (d, g) in desk.groups.iter().enumerate().filter(|(_, g)| g.len() >= 2) {
+    for (d, g) in desk.holders.held().filter(|(_, g)| g.len() >= 2) {
         let preds: Vec<_> = g
             .members()
             .iter()
@@ -210,6 +214,11 @@ fn harvest(scene: &Scene, work: &Work, e: usize) -> Harvest {
             .collect();
         if preds.iter().any(|p| p.cov.max_var().sqrt() > 0.12 * f) {
             continue;
+        }
+        if let &[a, b] = g.members()
+            && let Some(nats) = centroid_nats(s, d, preds[0], preds[1])
+        {
+            h.centroid.push(((a, b), nats));
         }
         let xy: Vec<[f64; 2]> = preds.iter().map(|p| [p.x, p.y]).collect();
         let flux: Vec<f64> = preds.iter().map(|p| flux_of(p.mag)).collect();
@@ -220,7 +229,7 @@ fn harvest(scene: &Scene, work: &Work, e: usize) -> Harvest {
             cov += p.cov.scaled(w * w);
         }
         let extra = (s.sensor.errors.blend_fwhm * f).powi(2);
-        cov += crate::maths::cov2::Cov2::round(extra);
+        cov += Cov2::round(extra);
         h.mixed.push(Mixed {
             chi2: cov.chi2(s.data.x_mas[d] - b.x_mas, s.data.y_mas[d] - b.y_mas),
             dmag: s.mag[d] - mag_of(b.flux),
@@ -228,6 +237,52 @@ fn harvest(scene: &Scene, work: &Work, e: usize) -> Harvest {
         });
     }
     h
+}
+
+/// Evidence that a blend of two lies at the centroid of its light and has all of it, against a
+/// profile fit \[nats\], limited so that no single one decides; `None` where the two laws agree.
+fn centroid_nats(s: &Sight, d: usize, a: &Pred, b: &Pred) -> Option<f64> {
+    let f = s.sensor.fwhm_mas;
+    let flux = [flux_of(a.mag), flux_of(b.mag)];
+    let minor = flux[0].min(flux[1]) / (flux[0] + flux[1]);
+    if (a.x - b.x).hypot(a.y - b.y) < 0.25 * f || minor < 0.1 || !s.mag[d].is_finite() {
+        return None;
+    }
+    let ln = |law: BlendLaw| {
+        let mut w = [0.0; 2];
+        let p = blend::place(law, f, &[[a.x, a.y], [b.x, b.y]], &flux, &mut w);
+        let mut cov = s.sensor.errors.position(s.data.cov_mas2[d], 0.0, f);
+        cov += a.cov.scaled(w[0] * w[0]) + b.cov.scaled(w[1] * w[1]);
+        cov += Cov2::round((0.02 * f).powi(2));
+        let var = s.mag_var[d] + w[0] * w[0] * a.mag_var + w[1] * w[1] * b.mag_var + 0.0025;
+        core_wing(
+            cov.chi2(s.data.x_mas[d] - p.x_mas, s.data.y_mas[d] - p.y_mas),
+            cov.det().ln(),
+        )
+        .0 + cost::ln_mag(s.mag[d] - mag_of(p.flux), var)
+    };
+    Some((ln(BlendLaw::Centroid) - ln(BlendLaw::Psf)).clamp(-2.0, 2.0))
+}
+
+/// Total evidence from which a law of blends is believed \[nats\].
+const LAW_NATS: f64 = 6.0;
+
+/// The law that the blends of an instrument follow, where they tell; each pair of stars has the
+/// weight of at most [`PAIR_WEIGHT`] blends.
+fn blend_law<'a>(told: impl Iterator<Item = &'a ((u32, u32), f64)>) -> Option<BlendLaw> {
+    let mut told: Vec<((u32, u32), f64)> = told.copied().collect();
+    told.sort_by_key(|t| t.0);
+    let sum: f64 = (told.chunk_by(|a, b| a.0 == b.0))
+        .map(|pair| {
+            let n = pair.len() as f64;
+            pair.iter().map(|t| t.1).sum::<f64>() * (PAIR_WEIGHT / n).min(1.0)
+        })
+        .sum();
+    (sum.abs() > LAW_NATS).then_some(if sum > 0.0 {
+        BlendLaw::Centroid
+    } else {
+        BlendLaw::Psf
+    })
 }
 
 /// Most weight that one pair of stars may have.
@@ -252,7 +307,8 @@ fn lonely_pair(desk: &Desk, k: u32, q: u32, reach_mas: f64) -> bool {
     let faintest = a.mag.max(b.mag) + 2.5;
     let mut near = Vec::new();
     [a, b].iter().all(|p| {
-        desk.grid.within(&desk.preds, p.x, p.y, reach_mas, &mut near);
+        desk.grid
+            .within(&desk.preds, p.x, p.y, reach_mas, &mut near);
         near.iter()
             .all(|&o| o == k || o == q || desk.preds[o as usize].mag > faintest)
     })
@@ -300,7 +356,7 @@ fn error_law(old: &ErrorLaw, fwhm: f64, all: Gather<'_>) -> ErrorLaw {
     });
     law.press_fwhm = (old.press_fwhm * variance_ratio(&mut pressed).sqrt()).clamp(0.01, 0.2);
     let mut mixed = all(&|h| h.mixed.iter().map(|c| c.chi2).collect());
-    law.blend_fwhm = (old.blend_fwhm * variance_ratio(&mut mixed).sqrt()).clamp(0.015, 0.15);
+    law.blend_fwhm = (old.blend_fwhm * variance_ratio(&mut mixed).sqrt()).clamp(0.005, 0.15);
     // Magnitudes: floor from bright ones, factor kept.
     let mut dm = all(&|h| {
         h.clean
@@ -326,9 +382,9 @@ fn error_law(old: &ErrorLaw, fwhm: f64, all: Gather<'_>) -> ErrorLaw {
     if let Some(m) = order::median(&mut bm) {
         let mut own = all(&|h| h.mixed.iter().map(|c| c.var).collect());
         let own = order::median(&mut own).unwrap_or(0.0);
-        let extra = ((m / 0.674_5).powi(2) - own).max(0.0025).sqrt();
+        let extra = ((m / 0.674_5).powi(2) - own).max(1e-4).sqrt();
         law.blend_mag =
-            ((extra * n + wide.blend_mag * DEFAULT_WEIGHT) / (n + DEFAULT_WEIGHT)).clamp(0.05, 0.5);
+            ((extra * n + wide.blend_mag * DEFAULT_WEIGHT) / (n + DEFAULT_WEIGHT)).clamp(0.01, 0.5);
     }
     law
 }

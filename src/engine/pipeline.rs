@@ -11,7 +11,7 @@ use crate::model::campaign::Campaign;
 use crate::model::detection::FieldEpoch;
 use crate::model::result::Solution;
 use crate::resolve::belief::{self, Beliefs};
-use crate::resolve::grow::{self, Scratch};
+use crate::resolve::grow;
 use crate::resolve::joint::{self, Choices};
 use crate::resolve::scene::Scene;
 use crate::resolve::work::Work;
@@ -95,9 +95,7 @@ fn conclude(
         .collect();
     let worth: Vec<f64> = (0..n as u32)
         .into_par_iter()
-        .map_init(Scratch::default, |sc, k| {
-            grow::worth(scene, &work, &work.stars[k as usize], Some(k), sc).total()
-        })
+        .map(|k| grow::worth(scene, &work, &work.stars[k as usize], Some(k)).total())
         .collect();
     for (star, w) in work.stars.iter_mut().zip(&worth) {
         star.worth = *w;

@@ -2,7 +2,7 @@
 
 use rayon::prelude::*;
 
-use crate::model::campaign::{Campaign, Selection};
+use crate::model::campaign::{BlendLaw, Campaign, Selection};
 use crate::model::detection::FieldEpoch;
 use crate::motion::state::{Dynamics, Wide};
 use crate::near::{Hit, Tree};
@@ -61,7 +61,8 @@ pub fn scene<'a>(campaign: &Campaign, epochs: &'a [FieldEpoch]) -> Scene<'a> {
                 errors: ErrorLaw::wide(data.fwhm_mas),
                 pairs: PairLaw::start(),
                 falses: FalseLaw::start(),
-                blend: settings.blend,
+                blend: settings.blend.unwrap_or(BlendLaw::Psf),
+                blend_stated: settings.blend.is_some(),
                 zero_point_mag: 0.0,
                 targeted: settings.selection == Selection::Targeted,
             };

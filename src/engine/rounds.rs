@@ -8,15 +8,17 @@ use super::prepare::apply_laws;
 use crate::maths::assign::{Edges, Solver};
 use crate::maths::order;
 use crate::resolve::grow::{self, Scratch};
+use crate::resolve::holders::Holders;
 use crate::resolve::joint;
 use crate::resolve::scene::Scene;
 use crate::resolve::star::{Cell, Star};
 use crate::resolve::work::{self, Desk, Work};
 
-/// Evidence a new track must bring \[nats\].
-pub const BIRTH_NATS: f64 = 4.0;
+/// Evidence a new track must bring \[nats\]: it is more likely than not. (Stars have their prior
+/// density and chance detections theirs, so nothing else is asked.)
+pub const BIRTH_NATS: f64 = 0.0;
 /// Evidence below which a track dies \[nats\].
-pub const DEATH_NATS: f64 = 2.0;
+pub const DEATH_NATS: f64 = 0.0;
 
 /// Refit all stars to their clean detections and predict every epoch afresh.
 pub fn refresh(scene: &Scene, work: &mut Work) {
@@ -57,10 +59,10 @@ pub fn assign(scene: &Scene, work: &mut Work) -> (f64, usize, u64) {
         sum.2 += a.nodes;
     }
     for (e, desk) in work.desks.iter_mut().enumerate() {
-        desk.groups = vec![Default::default(); scene.sights[e].len()];
+        desk.holders = Holders::all(scene.sights[e].len());
         for (k, star) in work.stars.iter().enumerate() {
             if let Some(d) = star.cells[e].detection() {
-                desk.groups[d as usize].push(k as u32);
+                desk.holders.push(d, k as u32);
             }
         }
     }
@@ -105,14 +107,14 @@ impl Tried {
 }
 
 /// Births from free detections, brightest first.
-pub fn births(scene: &Scene, work: &mut Work, joint: bool, tried: &mut Tried) {
+pub fn births(scene: &Scene, work: &mut Work, tried: &mut Tried) {
     let mut anchors: Vec<(f64, usize, u32)> = Vec::new();
     for (e, s) in scene.sights.iter().enumerate() {
         if s.sensor.targeted {
             continue;
         }
         for d in 0..s.len() {
-            if work.desks[e].groups[d].is_empty() && tried.of(e, d) < 2 {
+            if work.desks[e].holders.of(d).is_empty() && tried.of(e, d) < 2 {
                 let m = if s.mag[d].is_finite() { s.mag[d] } else { 99.0 };
                 anchors.push((m, e, d as u32));
             }
@@ -121,7 +123,6 @@ pub fn births(scene: &Scene, work: &mut Work, joint: bool, tried: &mut Tried) {
     anchors.sort_by(|a, b| a.0.total_cmp(&b.0).then((a.1, a.2).cmp(&(b.1, b.2))));
     let mut queue: std::collections::VecDeque<(usize, u32)> =
         anchors.into_iter().map(|a| (a.1, a.2)).collect();
-    let mut sc = Scratch::default();
     while !queue.is_empty() {
         let batch = next_batch(scene, work, &mut queue);
         let frozen = &*work;
@@ -134,18 +135,9 @@ pub fn births(scene: &Scene, work: &mut Work, joint: bool, tried: &mut Tried) {
         let before = work.stars.len();
         for (draft, &(e, d)) in drafts.into_iter().zip(&batch) {
             tried.add(e, d as usize);
-            let Some(draft) = draft else { continue };
-            let least = if scene.sights.len() <= FEW_EPOCHS {
-                PAIR_NATS
-            } else {
-                BIRTH_NATS
-            };
-            if draft.worth <= least {
-                if joint && work.desks[e].groups[d as usize].is_empty() {
-                    grow::joint_birth(scene, work, &draft, least, &mut sc);
-                }
+            let Some(draft) = draft.filter(|d| d.worth > BIRTH_NATS) else {
                 continue;
-            }
+            };
             let clash = work.stars[before..].iter().any(|s| {
                 s.cells
                     .iter()
@@ -177,7 +169,7 @@ fn next_batch(
     let mut later = Vec::new();
     let mut looked = 0;
     while let Some((e, d)) = queue.pop_front() {
-        if !work.desks[e].groups[d as usize].is_empty() {
+        if !work.desks[e].holders.of(d as usize).is_empty() {
             continue;
         }
         looked += 1;
@@ -251,7 +243,7 @@ fn partners(scene: &Scene, work: &Work, e: usize, d: u32, most: usize) -> Vec<(u
             + 0.1 * s.sensor.fwhm_mas;
         o.tree.within(x, y, reach, &mut hits);
         for h in &hits {
-            if !work.desks[f].groups[h.row as usize].is_empty() {
+            if !work.desks[f].holders.of(h.row as usize).is_empty() {
                 continue;
             }
             let dm = o.mag[h.row as usize] - m;
@@ -291,7 +283,7 @@ pub fn revise(scene: &Scene, work: &mut Work) {
         let frozen = &*work;
         (0..work.stars.len() as u32)
             .into_par_iter()
-            .map_init(Scratch::default, |sc, k| death_worth(scene, frozen, k, sc))
+            .map(|k| death_worth(scene, frozen, k))
             .collect()
     };
     let mut order: Vec<u32> = (0..work.stars.len() as u32).collect();
@@ -326,8 +318,8 @@ pub fn revise(scene: &Scene, work: &mut Work) {
     compact(scene, work, |k, _| !dead[k]);
 }
 
-fn death_worth(scene: &Scene, work: &Work, k: u32, sc: &mut Scratch) -> f64 {
-    grow::worth(scene, work, &work.stars[k as usize], Some(k), sc).hopeful(8.0)
+fn death_worth(scene: &Scene, work: &Work, k: u32) -> f64 {
+    grow::worth(scene, work, &work.stars[k as usize], Some(k)).hopeful(8.0)
 }
 
 fn judge(scene: &Scene, work: &Work, k: u32, sc: &mut Scratch) -> Verdict {
@@ -349,7 +341,7 @@ fn judge(scene: &Scene, work: &Work, k: u32, sc: &mut Scratch) -> Verdict {
         .iter()
         .filter(|c| matches!(c, Cell::Missed))
         .count();
-    let w = death_worth(scene, work, k, sc);
+    let w = death_worth(scene, work, k);
     if w > 40.0 && holes * 5 < alone.len() {
         return Verdict::Kept;
     }
@@ -365,14 +357,9 @@ fn judge(scene: &Scene, work: &Work, k: u32, sc: &mut Scratch) -> Verdict {
             }
         }
     }
-    let least = if scene.sights.len() <= FEW_EPOCHS {
-        PAIR_NATS - 1.0
-    } else {
-        DEATH_NATS
-    };
     match best {
-        Some((bw, star)) if bw > w + 1.0 && bw > least => Verdict::Regrown(Box::new(star)),
-        _ if w > least && alone.len() >= 2 => Verdict::Kept,
+        Some((bw, star)) if bw > w + 1.0 && bw > DEATH_NATS => Verdict::Regrown(Box::new(star)),
+        _ if w > DEATH_NATS && alone.len() >= 2 => Verdict::Kept,
         _ => Verdict::Dead,
     }
 }
@@ -408,8 +395,6 @@ fn far_apart(scene: &Scene, work: &Work, queue: &mut std::collections::VecDeque<
 /// Campaigns of so few epochs begin with an assignment of pairs.
 const FEW_EPOCHS: usize = 3;
 
-/// Least evidence of a pair in so short a campaign: more likely than not.
-const PAIR_NATS: f64 = 0.0;
 /// Evidence from which a pair may teach the difference of the magnitude scales.
 const SECURE_NATS: f64 = 8.0;
 /// Scatter of the colours of stars between two instruments whose bands are not known to be the
@@ -485,7 +470,7 @@ fn pairs(scene: &Scene, work: &Work, first: usize, second: usize) -> Vec<Vec<Pai
                     let draft = grow::grow(scene, work, &[(first, d), (e, q)], -25.0, None, sc)?;
                     let step_mag =
                         scene.sights[e].mag[q as usize] - scene.sights[first].mag[d as usize];
-                    (draft.worth > PAIR_NATS && draft.star.cells[e] == Cell::Alone(q)).then_some(
+                    (draft.worth > BIRTH_NATS && draft.star.cells[e] == Cell::Alone(q)).then_some(
                         Pair {
                             row: q,
                             draft,
@@ -509,7 +494,7 @@ pub fn run(scene: &mut Scene, observer: &dyn Observer) -> Work {
         pair_births(scene, &mut work);
     }
     observer.stage("first tracks", None);
-    births(scene, &mut work, false, &mut tried);
+    births(scene, &mut work, &mut tried);
     for round in 0..ROUNDS {
         observer.stage("assigning", Some((ROUNDS - round) as u64));
         for _ in 0..2 {
@@ -518,10 +503,11 @@ pub fn run(scene: &mut Scene, observer: &dyn Observer) -> Work {
         }
         refresh(scene, &mut work);
         estimate::laws(scene, &work);
+        assign(scene, &mut work);
         observer.stage("revising", None);
         revise(scene, &mut work);
         observer.stage("births", None);
-        births(scene, &mut work, true, &mut tried);
+        births(scene, &mut work, &mut tried);
     }
     for _ in 0..2 {
         refresh(scene, &mut work);

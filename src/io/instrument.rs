@@ -136,7 +136,7 @@ pub(super) fn read_keys(mut draft: Draft, keys: &Keys<'_>) -> Draft {
             ],
         ),
     );
-    set(
+    set_some(
         &mut s.blend,
         keys.choice(
             "blend",

@@ -128,7 +128,8 @@ pub struct Instrument {
     pub frame: FrameFreedom,
     pub distortion: Distortion,
     pub selection: Selection,
-    pub blend: BlendLaw,
+    /// `None` = not stated: learnt from the lists.
+    pub blend: Option<BlendLaw>,
     /// List column for each of our names, where it differs from the default.
     pub columns: Vec<(String, ColumnRef)>,
     pub default_err_mas: Option<f64>,
@@ -154,7 +155,7 @@ impl Instrument {
             frame: FrameFreedom::Known,
             distortion: Distortion::PerEpoch,
             selection: Selection::Blind,
-            blend: BlendLaw::Psf,
+            blend: None,
             columns: Vec::new(),
             default_err_mas: None,
             default_mag_err: None,

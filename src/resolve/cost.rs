@@ -99,7 +99,7 @@ pub fn shared(s: &Sight, d: usize, preds: &[&Pred]) -> GroupFit {
     // with a few per cent of the light leaves the measurement of the main star as good as it was.
     let main = out.share[..n].iter().copied().fold(0.0, f64::max);
     let mixed = (3.0 * (1.0 - main)).min(1.0);
-    let model = mixed * (sn.errors.blend_fwhm * sn.fwhm_mas + 0.15 * spread2.sqrt());
+    let model = mixed * (sn.errors.blend_fwhm * sn.fwhm_mas + sn.spread_error() * spread2.sqrt());
     cov += Cov2::round(model * model);
     let chi2 = cov.chi2(e.x_mas[d] - b.x_mas, e.y_mas[d] - b.y_mas);
     if chi2 > GATE_CHI2 {
@@ -196,16 +196,22 @@ pub fn settle(s: &Sight, p: &mut Pred, near: &mut dyn Iterator<Item = Pred>) {
     let f = s.sensor.fwhm_mas;
     let mut wings = 0.0;
     let mut press: f64 = 0.0;
+    let mut apart = 0.0;
+    let reach = s.sensor.pairs.reach_fwhm();
     for q in near {
         let sep = (p.x - q.x).hypot(p.y - q.y) / f;
         if sep < 4.0 && q.mag < p.mag - 1.0 {
             wings += s.sensor.depth.wing(q.flux, sep);
+        }
+        if sep < reach {
+            apart += ln_apart(s, p, &q);
         }
         if sep < 1.8 {
             press = press.max((q.flux / p.flux).min(1.0) * ((1.8 - sep) / 0.9).clamp(0.0, 1.0));
         }
     }
     p.press = press;
+    p.ln_apart = apart;
     p.contrast = Depth::contrast(p.flux, wings);
     let mut seen = 0.0;
     // The magnitude is uncertain: average the chance over three points of its distribution.

@@ -30,6 +30,25 @@ impl Grid {
             y1 = y1.max(p.y);
             n += 1;
         }
+        let mut g = Self::frame([x0, x1, y0, y1], n, reach);
+        for (k, p) in preds.iter().enumerate() {
+            if p.active {
+                g.insert(k as u32, p.x, p.y);
+            }
+        }
+        g
+    }
+
+    /// An empty grid over the places of a list.
+    #[must_use]
+    pub fn over(x: &[f64], y: &[f64], reach: f64) -> Self {
+        let least = |v: &[f64]| v.iter().copied().fold(f64::INFINITY, f64::min);
+        let most = |v: &[f64]| v.iter().copied().fold(f64::NEG_INFINITY, f64::max);
+        Self::frame([least(x), most(x), least(y), most(y)], x.len(), reach)
+    }
+
+    /// An empty grid for about `n` stars within (x0, x1, y0, y1).
+    fn frame([mut x0, mut x1, mut y0, mut y1]: [f64; 4], n: usize, reach: f64) -> Self {
         if n == 0 {
             (x0, x1, y0, y1) = (0.0, 0.0, 0.0, 0.0);
         }
@@ -37,20 +56,14 @@ impl Grid {
         let cell = reach.max((area / (n.max(16) as f64)).sqrt());
         let nx = ((x1 - x0) / cell) as usize + 1;
         let ny = ((y1 - y0) / cell) as usize + 1;
-        let mut g = Self {
+        Self {
             x0,
             y0,
             cell,
             nx,
             ny,
             bins: vec![Vec::new(); nx * ny],
-        };
-        for (k, p) in preds.iter().enumerate() {
-            if p.active {
-                g.insert(k as u32, p.x, p.y);
-            }
         }
-        g
     }
 
     fn column(&self, x: f64) -> usize {

@@ -24,7 +24,6 @@ pub struct Draft {
 /// Buffers that a sequence of growths shares.
 #[derive(Debug, Default)]
 pub struct Scratch {
-    near: Vec<u32>,
     hits: Vec<crate::near::Hit>,
     obs: Vec<Obs>,
     order: Vec<usize>,
@@ -142,7 +141,7 @@ fn choose(
     let (mut best, mut second) = ((Cell::Missed, 0.0), 0.0_f64);
     for h in &sc.hits {
         let d = h.row as usize;
-        let g = &desk.groups[d];
+        let g = desk.holders.of(d);
         let (cell, gain) = if g.is_empty() || own.is_some_and(|k| g.len() == 1 && g.has(k)) {
             (Cell::Alone(d as u32), cost::alone(s, d, p))
         } else {
@@ -241,7 +240,10 @@ pub fn grow(
             continue;
         }
         let (cell, gain, lead) = choose(scene, work, e, &p, own, sc);
-        running += p.ln_miss + gain;
+        // Not to be seen beside a neighbour that may hide it says nothing yet.
+        if p.ln_apart > HIDDEN_NATS || gain > 0.0 {
+            running += p.ln_miss + gain;
+        }
         if lead < 2.0 && gain > 0.0 && n_clean < 6 {
             // Undecided while little is known: leave this epoch for the second pass.
             continue;
@@ -331,7 +333,7 @@ pub fn finish(
     star.blends = blends;
     sc.obs.extend(star.blends.iter().map(|b| b.1));
     star.fit = state_fit::fit_with(&scene.dynamics, &sc.obs, n_alone, t0, &star.fit.p, 20)?;
-    let parts = worth(scene, work, &star, own, sc);
+    let parts = worth(scene, work, &star, own);
     let worth = parts.hopeful(3.0);
     star.worth = parts.total();
     Some(Draft {
@@ -407,10 +409,13 @@ impl Worth {
     }
 }
 
+/// ln cost of being apart from all neighbours below which a missed star may be hidden.
+const HIDDEN_NATS: f64 = -0.35;
+
 /// Evidence of a star with everybody else fixed \[nats\]: how much better the lists are
 /// explained with it than without it.
 #[must_use]
-pub fn worth(scene: &Scene, work: &Work, star: &Star, own: Option<u32>, sc: &mut Scratch) -> Worth {
+pub fn worth(scene: &Scene, work: &Work, star: &Star, own: Option<u32>) -> Worth {
     let mut parts = [0.0; 6];
     let mut total = star.fit.ln_evidence;
     let mut ln_star = 0.0;
@@ -423,16 +428,13 @@ pub fn worth(scene: &Scene, work: &Work, star: &Star, own: Option<u32>, sc: &mut
             continue;
         }
         // Being apart from every neighbour: undone inside a group by the merge bonus.
-        let reach = s.sensor.pairs.reach_fwhm() * s.sensor.fwhm_mas;
-        desk.grid.within(&desk.preds, p.x, p.y, reach, &mut sc.near);
-        for &q in &sc.near {
-            if Some(q) != own {
-                total += cost::ln_apart(s, &p, &desk.preds[q as usize]);
-                parts[0] += cost::ln_apart(s, &p, &desk.preds[q as usize]);
-            }
-        }
+        parts[0] += p.ln_apart;
+        total += p.ln_apart;
         total += p.ln_miss;
-        parts[1] += p.ln_miss;
+        if p.ln_apart < HIDDEN_NATS && matches!(cell, Cell::Missed) {
+            // Not to be seen where a neighbour may hide it is a matter between the two.
+            parts[5] += p.ln_miss;
+        }
         match *cell {
             Cell::Alone(d) => {
                 let d = d as usize;
@@ -448,7 +450,7 @@ pub fn worth(scene: &Scene, work: &Work, star: &Star, own: Option<u32>, sc: &mut
                 n += 1.0;
             }
             Cell::Shared(d) => {
-                let mut g: Group = desk.groups[d as usize];
+                let mut g: Group = *desk.holders.of(d as usize);
                 if let Some(k) = own {
                     g.remove(k);
                 }
@@ -463,8 +465,9 @@ pub fn worth(scene: &Scene, work: &Work, star: &Star, own: Option<u32>, sc: &mut
                 } else {
                     cost::shared(s, d as usize, &ps[..=m]).gain
                 };
-                total += (with - without).max(-30.0);
-                parts[3] += (with - without).max(-30.0);
+                let gain = with.max(-30.0) - without;
+                total += gain;
+                parts[3] += gain;
             }
             Cell::Missed | Cell::Out => {}
         }
@@ -476,102 +479,9 @@ pub fn worth(scene: &Scene, work: &Work, star: &Star, own: Option<u32>, sc: &mut
         total += ln;
         parts[4] = ln;
     }
-    let group = parts[0] + parts[3];
+    let group = parts[0] + parts[3] + parts[5];
     Worth {
         lone: total - group,
         group,
-    }
-}
-
-/// The star whose closeness costs a draft most: (its number, ln cost over all epochs).
-#[must_use]
-pub fn presser(scene: &Scene, work: &Work, star: &Star, sc: &mut Scratch) -> Option<(u32, f64)> {
-    let mut cost: Vec<(u32, f64)> = Vec::new();
-    for e in 0..scene.sights.len() {
-        let s = &scene.sights[e];
-        let desk = &work.desks[e];
-        let p = predict(scene, work, e, star, None);
-        if !p.active {
-            continue;
-        }
-        let reach = s.sensor.pairs.reach_fwhm() * s.sensor.fwhm_mas;
-        desk.grid.within(&desk.preds, p.x, p.y, reach, &mut sc.near);
-        for &q in &sc.near {
-            let c = cost::ln_apart(s, &p, &desk.preds[q as usize]);
-            match cost.iter_mut().find(|x| x.0 == q) {
-                Some(x) => x.1 += c,
-                None => cost.push((q, c)),
-            }
-        }
-    }
-    cost.into_iter()
-        .min_by(|a, b| a.1.total_cmp(&b.1).then(a.0.cmp(&b.0)))
-}
-
-/// Joint birth: the draft is born together with a revision of the star that has absorbed its
-/// light. That star gives up, for its own fit, every detection in which the two would be one;
-/// both are then fitted again. Kept when the two together explain more than the one did.
-///
-/// Leaves `work` as it was when it returns `None`.
-pub fn joint_birth(
-    scene: &Scene,
-    work: &mut Work,
-    draft: &Draft,
-    least: f64,
-    sc: &mut Scratch,
-) -> Option<f64> {
-    let (a, apart) = presser(scene, work, &draft.star, sc)?;
-    if draft.worth - apart < least {
-        return None;
-    }
-    let old = work.stars[a as usize].clone();
-    let before = worth(scene, work, &old, Some(a), sc).total();
-    let mut changed = old.clone();
-    let mut given = 0;
-    for e in 0..scene.sights.len() {
-        let Cell::Alone(d) = old.cells[e] else {
-            continue;
-        };
-        let p = predict(scene, work, e, &draft.star, None);
-        if !p.active {
-            continue;
-        }
-        let q = &work.desks[e].preds[a as usize];
-        if cost::ln_apart(&scene.sights[e], &p, q) < -0.4 {
-            changed.cells[e] = Cell::Shared(d);
-            given += 1;
-        }
-    }
-    let left = changed
-        .cells
-        .iter()
-        .filter(|c| matches!(c, Cell::Alone(_)))
-        .count();
-    if given == 0 || left < 2 {
-        return None;
-    }
-    recentre(scene, &mut changed);
-    let desks = (work.desks.as_slice(), Some(a));
-    if !work::refit(scene, &mut changed, |_| 0.0, |_| 1.0, desks, 20) {
-        return None;
-    }
-    let undo = |work: &mut Work, old: Star| {
-        work.withdraw(a);
-        work.replace(scene, a, old);
-    };
-    work.withdraw(a);
-    let after_a = worth(scene, work, &changed, Some(a), sc).total();
-    work.replace(scene, a, changed);
-    let grown = finish(scene, work, draft.star.clone(), None, sc);
-    match grown {
-        Some(g) if g.n_alone >= 2 && g.worth > least && after_a + g.worth > before + least => {
-            let total = after_a + g.worth - before;
-            work.add(scene, g.star);
-            Some(total)
-        }
-        _ => {
-            undo(work, old);
-            None
-        }
     }
 }

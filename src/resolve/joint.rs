@@ -147,32 +147,11 @@ pub fn choices(scene: &Scene, e: usize, desk: &Desk) -> Choices {
     let mut near = Vec::new();
     let mut opts: Vec<Vec<Option_>> = Vec::with_capacity(n_det);
     let mut buf = Vec::new();
-    // Components: detections tied by a common star.
-    let mut parent: Vec<u32> = (0..n_det as u32).collect();
-    let mut first = vec![u32::MAX; desk.preds.len()];
     for d in 0..n_det {
         options(scene, e, desk, d, &mut near, &mut buf);
-        for o in &buf {
-            for &k in o.stars.members() {
-                let f = first[k as usize];
-                if f == u32::MAX {
-                    first[k as usize] = d as u32;
-                } else {
-                    union(&mut parent, f, d as u32);
-                }
-            }
-        }
         opts.push(buf.clone());
     }
-    let mut roots: Vec<(u32, u32)> = (0..n_det as u32)
-        .filter(|&d| !opts[d as usize].is_empty())
-        .map(|d| (find(&mut parent, d), d))
-        .collect();
-    roots.sort_unstable();
-    let components = roots
-        .chunk_by(|a, b| a.0 == b.0)
-        .map(|c| c.iter().map(|q| q.1).collect())
-        .collect();
+    let components = components(&opts, desk.preds.len());
     Choices {
         options: opts,
         components,
@@ -196,6 +175,31 @@ pub fn assign(scene: &Scene, e: usize, desk: &Desk) -> Assignment {
         solve(dets, &c.options, &mut taken, &mut result);
     }
     result
+}
+
+/// Detections tied by a common star, component by component.
+pub(super) fn components(options: &[Vec<Option_>], n_stars: usize) -> Vec<Vec<u32>> {
+    let mut parent: Vec<u32> = (0..options.len() as u32).collect();
+    let mut first = vec![u32::MAX; n_stars];
+    for (d, of_d) in options.iter().enumerate() {
+        for &k in of_d.iter().flat_map(|o| o.stars.members()) {
+            let f = first[k as usize];
+            if f == u32::MAX {
+                first[k as usize] = d as u32;
+            } else {
+                union(&mut parent, f, d as u32);
+            }
+        }
+    }
+    let mut roots: Vec<(u32, u32)> = (0..options.len() as u32)
+        .filter(|&d| !options[d as usize].is_empty())
+        .map(|d| (find(&mut parent, d), d))
+        .collect();
+    roots.sort_unstable();
+    roots
+        .chunk_by(|a, b| a.0 == b.0)
+        .map(|c| c.iter().map(|q| q.1).collect())
+        .collect()
 }
 
 fn find(parent: &mut [u32], mut k: u32) -> u32 {
@@ -258,7 +262,12 @@ impl Search<'_> {
     }
 }
 
-fn solve(dets: &[u32], opts: &[Vec<Option_>], taken: &mut [bool], result: &mut Assignment) {
+pub(super) fn solve(
+    dets: &[u32],
+    opts: &[Vec<Option_>],
+    taken: &mut [bool],
+    result: &mut Assignment,
+) {
     let mut order = dets.to_vec();
     // Detections with the most to gain first: good incumbents early.
     order.sort_by(|&a, &b| {

@@ -6,6 +6,7 @@ pub mod cost;
 pub mod exact;
 pub mod grid;
 pub mod grow;
+pub mod holders;
 pub mod joint;
 pub mod pack;
 pub mod posterior;

@@ -60,6 +60,8 @@ pub struct Pred {
     pub press: f64,
     /// ln(1 - chance of being listed).
     pub ln_miss: f64,
+    /// ln of the chance of being apart from every neighbour.
+    pub ln_apart: f64,
 }
 
 impl Pred {
@@ -78,6 +80,7 @@ impl Pred {
         contrast: 1.0,
         press: 0.0,
         ln_miss: 0.0,
+        ln_apart: 0.0,
     };
 }
 
@@ -89,6 +92,11 @@ pub struct Group {
 }
 
 impl Group {
+    pub const EMPTY: Self = Self {
+        n: 0,
+        m: [0; MAX_GROUP],
+    };
+
     #[must_use]
     pub fn of(members: &[u32]) -> Self {
         let mut g = Self::default();

@@ -2,8 +2,9 @@
 
 use super::cost;
 use super::grid::Grid;
+use super::holders::Holders;
 use super::scene::Scene;
-use super::star::{Cell, Group, MAX_GROUP, Pred, Star};
+use super::star::{Cell, MAX_GROUP, Pred, Star};
 use crate::maths::cov2::Cov2;
 use crate::motion::state_fit::{self, Obs, core_wing};
 use crate::sensor::blend::{self, flux_of};
@@ -14,7 +15,7 @@ pub struct Desk {
     pub preds: Vec<Pred>,
     pub grid: Grid,
     /// Stars that hold each detection.
-    pub groups: Vec<Group>,
+    pub holders: Holders,
 }
 
 /// Tracks and desks (one desk per epoch).
@@ -33,8 +34,8 @@ impl Work {
             .iter()
             .map(|s| Desk {
                 preds: Vec::new(),
-                grid: Grid::default(),
-                groups: vec![Group::default(); s.len()],
+                grid: Grid::over(&s.data.x_mas, &s.data.y_mas, 1.5 * s.sensor.fwhm_mas),
+                holders: Holders::all(s.len()),
             })
             .collect();
         Self {
@@ -49,7 +50,7 @@ impl Work {
         for (e, cell) in star.cells.iter().enumerate() {
             let desk = &mut self.desks[e];
             if let Some(d) = cell.detection() {
-                desk.groups[d as usize].push(k);
+                desk.holders.push(d, k);
             }
             let mut p = predict(scene, e, &star, 0.0);
             if p.active {
@@ -70,7 +71,7 @@ impl Work {
         for (e, cell) in star.cells.iter().enumerate() {
             let desk = &mut self.desks[e];
             if let Some(d) = cell.detection() {
-                desk.groups[d as usize].remove(k);
+                desk.holders.remove(d, k);
             }
             let p = desk.preds[k as usize];
             if p.active {
@@ -85,7 +86,7 @@ impl Work {
         for (e, cell) in star.cells.iter().enumerate() {
             let desk = &mut self.desks[e];
             if let Some(d) = cell.detection() {
-                desk.groups[d as usize].push(k);
+                desk.holders.push(d, k);
             }
             let mut p = predict(scene, e, &star, 0.0);
             if p.active {
@@ -117,10 +118,7 @@ fn without((x, y): (f64, f64), cov: Cov2, own: &Obs) -> ((f64, f64), Cov2) {
     let out = less.inverse();
     let bx = full.xx * x + full.xy * y - w.xx * own.x_mas - w.xy * own.y_mas;
     let by = full.xy * x + full.yy * y - w.xy * own.x_mas - w.yy * own.y_mas;
-    (
-        (out.xx * bx + out.xy * by, out.xy * bx + out.yy * by),
-        out,
-    )
+    ((out.xx * bx + out.xy * by, out.xy * bx + out.yy * by), out)
 }
 
 /// Prediction of a star at an epoch, its own detection there left out.
@@ -168,6 +166,7 @@ pub fn predict(scene: &Scene, e: usize, star: &Star, press: f64) -> Pred {
         contrast: 1.0,
         press,
         ln_miss: 0.0,
+        ln_apart: 0.0,
     }
 }
 
@@ -221,16 +220,16 @@ pub fn desk(scene: &Scene, e: usize, stars: &[Star], old: Option<&Desk>) -> Desk
         );
         preds[k] = p;
     }
-    let mut groups = vec![Group::default(); s.len()];
+    let mut holders = Holders::all(s.len());
     for (k, star) in stars.iter().enumerate() {
         if let Some(d) = star.cells[e].detection() {
-            groups[d as usize].push(k as u32);
+            holders.push(d, k as u32);
         }
     }
     Desk {
         preds,
         grid,
-        groups,
+        holders,
     }
 }
 
@@ -260,7 +259,7 @@ pub fn observation(scene: &Scene, e: usize, d: usize, press: f64) -> Obs {
 }
 
 /// Least share of a blend's light from which a star's own place is worked out.
-const LEAST_PART: f64 = 0.25;
+const LEAST_PART: f64 = 0.06;
 
 /// Places of a star worked out from the blends it is part of: what is left of a blend's place
 /// once the other members' parts are taken away (Cov grows as the inverse square of the share).
@@ -299,7 +298,7 @@ fn blend_place(
     xy[0] = [x, y];
     flux[0] = flux_of(star.mag);
     let mut n = 1;
-    for &k in desk.groups[d].members() {
+    for &k in desk.holders.of(d).members() {
         if Some(k) == own || n == MAX_GROUP {
             continue;
         }
@@ -339,7 +338,7 @@ fn blend_place(
     }
     let main = part[..n].iter().copied().fold(0.0, f64::max);
     let mixed = (3.0 * (1.0 - main)).min(1.0);
-    let model = mixed * (sn.errors.blend_fwhm * sn.fwhm_mas + 0.15 * spread2.sqrt());
+    let model = mixed * (sn.errors.blend_fwhm * sn.fwhm_mas + sn.spread_error() * spread2.sqrt());
     cov += Cov2::round(model * model + light);
     Some(Obs {
         t_yr: s.t_yr,

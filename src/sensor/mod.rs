@@ -8,6 +8,7 @@ pub mod errors;
 pub mod falses;
 pub mod pairs;
 
+use crate::model::campaign::BlendLaw;
 use depth::Depth;
 use errors::ErrorLaw;
 use falses::FalseLaw;
@@ -21,9 +22,23 @@ pub struct Sensor {
     pub errors: ErrorLaw,
     pub pairs: PairLaw,
     pub falses: FalseLaw,
-    pub blend: crate::model::campaign::BlendLaw,
+    pub blend: BlendLaw,
+    /// The campaign states the law of blends; otherwise it is learnt.
+    pub blend_stated: bool,
     /// Magnitude to add to this epoch's list to bring it to the common scale.
     pub zero_point_mag: f64,
     /// Absence means nothing and no star is born here.
     pub targeted: bool,
+}
+
+impl Sensor {
+    /// Error of a blend's predicted place, as a share of the extent of its stars: a profile fit
+    /// depends on the profile, a centroid hardly.
+    #[must_use]
+    pub fn spread_error(&self) -> f64 {
+        match self.blend {
+            BlendLaw::Psf => 0.15,
+            BlendLaw::Centroid => 0.03,
+        }
+    }
 }

@@ -1,6 +1,6 @@
 //! Tracks, memberships, leftovers and tangles of a finished search, in table order.
 
-use crate::model::campaign::Campaign;
+use crate::model::campaign::{BlendLaw, Campaign};
 use crate::model::detection::FieldEpoch;
 use crate::model::flag::Flags;
 use crate::model::motion::MotionKind;
@@ -16,8 +16,30 @@ use crate::sensor::blend;
 use super::proof::Proved;
 use super::{flags, rivals, summary};
 
-/// Shares below this are not listed: the star has no part in the light that could be checked.
-pub const LEAST_SHARE: f64 = 0.06;
+/// Which members of a blend are listed: where less of a star's light is in the measurement, it
+/// has no part in it that could be checked.
+struct Listing {
+    least_share: f64,
+    /// Distance from the blend.
+    reach_fwhm: f64,
+}
+
+impl Listing {
+    /// A centroid takes in the light of every star that is not resolved; a profile fit that of the
+    /// stars under the profile.
+    fn of(law: BlendLaw) -> Self {
+        match law {
+            BlendLaw::Centroid => Self {
+                least_share: 0.05,
+                reach_fwhm: 2.0,
+            },
+            BlendLaw::Psf => Self {
+                least_share: 0.07,
+                reach_fwhm: 0.7,
+            },
+        }
+    }
+}
 /// Least belief in a membership of the best explanation.
 const LEAST_BELIEF: f64 = 0.4;
 /// Probability below which a membership counts as in doubt.
@@ -124,7 +146,8 @@ fn memberships(parts: &Parts) -> Vec<Member> {
     let mut out = Vec::new();
     for (e, s) in scene.sights.iter().enumerate() {
         let desk = &work.desks[e];
-        for (d, g) in desk.groups.iter().enumerate() {
+        let listing = Listing::of(s.sensor.blend);
+        for (d, g) in desk.holders.held() {
             let stars = g.members();
             let mut xy = [[0.0; 2]; crate::resolve::star::MAX_GROUP];
             let mut flux = [0.0; crate::resolve::star::MAX_GROUP];
@@ -132,9 +155,6 @@ fn memberships(parts: &Parts) -> Vec<Member> {
             for (i, &k) in stars.iter().enumerate() {
                 xy[i] = [desk.preds[k as usize].x, desk.preds[k as usize].y];
                 flux[i] = desk.preds[k as usize].flux;
-            }
-            if stars.is_empty() {
-                continue;
             }
             let n = stars.len();
             let b = blend::place(
@@ -145,12 +165,13 @@ fn memberships(parts: &Parts) -> Vec<Member> {
                 &mut share[..n],
             );
             let total: f64 = flux[..n].iter().sum();
-            let listed = (0..n).filter(|&i| flux[i] / total >= LEAST_SHARE).count();
+            let listed = (0..n)
+                .filter(|&i| flux[i] / total >= listing.least_share)
+                .count();
             for (i, &k) in stars.iter().enumerate() {
                 let part = flux[i] / total;
                 let far = (xy[i][0] - b.x_mas).hypot(xy[i][1] - b.y_mas) / s.sensor.fwhm_mas;
-                let env = |s: &str, d: f64| std::env::var(s).ok().and_then(|v| v.parse::<f64>().ok()).unwrap_or(d);
-                if n > 1 && (part < env("LS", LEAST_SHARE) || far > env("FAR", 0.8)) {
+                if n > 1 && (part < listing.least_share || far > listing.reach_fwhm) {
                     continue;
                 }
                 let k = k as usize;
@@ -173,9 +194,6 @@ fn memberships(parts: &Parts) -> Vec<Member> {
                     if flags::flux_jump(s.mag[d] - mag, var) {
                         f.set(Flags::FLUX_JUMP);
                     }
-                }
-                if n > 1 && p < env("PMIN", 0.0) {
-                    continue;
                 }
                 if p < DOUBT {
                     f.set(Flags::AMBIGUOUS);

@@ -78,7 +78,7 @@ pub fn prove(work: &Work, choices: &[Choices], stars: &[u32]) -> Tangle {
             if let Some(d) = cell.detection()
                 && let Some(o) = choices[e].options[d as usize]
                     .iter()
-                    .find(|o| o.stars == work.desks[e].groups[d as usize])
+                    .find(|o| o.stars == *work.desks[e].holders.of(d as usize))
             {
                 in_options += o.gain - gain_without(&choices[e].options[d as usize], o, k);
             }
@@ -109,8 +109,8 @@ pub fn prove(work: &Work, choices: &[Choices], stars: &[u32]) -> Tangle {
     let mut incumbent = program.empty();
     incumbent.exists.fill(true);
     for (e, _) in choices.iter().enumerate() {
-        for (d, g) in work.desks[e].groups.iter().enumerate() {
-            if g.is_empty() || !g.members().iter().all(|k| local.contains_key(k)) {
+        for (d, g) in work.desks[e].holders.held() {
+            if !g.members().iter().all(|k| local.contains_key(k)) {
                 continue;
             }
             buf.clear();

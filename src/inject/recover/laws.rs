@@ -101,7 +101,7 @@ pub fn fitted(run: Linked<'_>) -> Vec<EpochLaw> {
             EpochLaw {
                 depth: depths[e],
                 pairs: resolved[epoch.instrument],
-                blend: settings.blend,
+                blend: settings.blend.unwrap_or(BlendLaw::Psf),
                 error_factor: if factor > 0.0 { factor } else { 1.0 },
                 error_floor_mas: report.map_or(0.0, |r| r.error_floor_mas),
                 targeted: settings.selection == Selection::Targeted,
