@@ -4,10 +4,13 @@ pub mod estimate;
 pub mod frames;
 pub mod observer;
 pub mod orbits;
+pub mod pairs;
 pub mod pipeline;
 pub mod prepare;
+pub mod revolving;
 pub mod rounds;
 pub mod rulings;
+pub mod seeds;
 pub mod settings;
 
 pub use frames::{Linked, link_lists};

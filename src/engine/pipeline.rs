@@ -4,6 +4,7 @@ use rayon::prelude::*;
 
 use super::observer::Observer;
 use super::rulings::{self, Broken, Discards};
+use super::seeds::Seeds;
 use super::settings::Settings;
 use super::{orbits, prepare, rounds};
 use crate::maths::lnprob::logistic;
@@ -64,8 +65,10 @@ pub fn link(
     let epochs = &*discards.without(epochs);
     let mut solution = pool.install(|| {
         let mut scene = prepare::scene(campaign, epochs);
-        let work = rounds::run(&mut scene, observer);
+        let seeds = Seeds::of(&scene);
+        let work = rounds::run(&mut scene, &seeds, observer);
         let mut solution = conclude(campaign, epochs, &scene, work, observer);
+        seeds.report(&mut solution);
         orbits::conclude(campaign, epochs, settings, &mut solution, observer);
         solution
     });

@@ -4,9 +4,9 @@ use rayon::prelude::*;
 
 use super::estimate;
 use super::observer::Observer;
-use super::prepare::apply_laws;
-use crate::maths::assign::{Edges, Solver};
-use crate::maths::order;
+use super::pairs::{self, FEW_EPOCHS};
+use super::revolving;
+use super::seeds::Seeds;
 use crate::resolve::grow::{self, Scratch};
 use crate::resolve::holders::Holders;
 use crate::resolve::joint;
@@ -107,7 +107,7 @@ impl Tried {
 }
 
 /// Births from free detections, brightest first.
-pub fn births(scene: &Scene, work: &mut Work, tried: &mut Tried) {
+pub fn births(scene: &Scene, seeds: &Seeds, work: &mut Work, tried: &mut Tried) {
     let mut anchors: Vec<(f64, usize, u32)> = Vec::new();
     for (e, s) in scene.sights.iter().enumerate() {
         if s.sensor.targeted {
@@ -129,7 +129,7 @@ pub fn births(scene: &Scene, work: &mut Work, tried: &mut Tried) {
         let drafts: Vec<Option<grow::Draft>> = batch
             .par_iter()
             .map_init(Scratch::default, |sc, &(e, d)| {
-                propose(scene, frozen, e, d, sc)
+                propose(scene, seeds, frozen, e, d, sc)
             })
             .collect();
         let before = work.stars.len();
@@ -197,12 +197,19 @@ fn next_batch(
 }
 
 /// Best growth from an anchor over several partner detections.
-fn propose(scene: &Scene, work: &Work, e: usize, d: u32, sc: &mut Scratch) -> Option<grow::Draft> {
+fn propose(
+    scene: &Scene,
+    seeds: &Seeds,
+    work: &Work,
+    e: usize,
+    d: u32,
+    sc: &mut Scratch,
+) -> Option<grow::Draft> {
     let mut best = grow::grow(scene, work, &[(e, d)], -12.0, None, sc);
     if best.as_ref().is_some_and(|b| b.worth > 60.0) {
         return best;
     }
-    for seed in partners(scene, work, e, d, 4) {
+    for seed in seeds.partners(scene, work, (e, d), 4) {
         if let Some(g) = grow::grow(scene, work, &[(e, d), seed], -12.0, None, sc)
             && best.as_ref().is_none_or(|b| g.worth > b.worth)
         {
@@ -210,62 +217,6 @@ fn propose(scene: &Scene, work: &Work, e: usize, d: u32, sc: &mut Scratch) -> Op
         }
     }
     best
-}
-
-/// Free detections of like magnitude at other epochs that could be the same star.
-fn partners(scene: &Scene, work: &Work, e: usize, d: u32, most: usize) -> Vec<(usize, u32)> {
-    let s = &scene.sights[e];
-    let (x, y, m) = (
-        s.data.x_mas[d as usize],
-        s.data.y_mas[d as usize],
-        s.mag[d as usize],
-    );
-    let at = scene.by_time.iter().position(|&q| q == e).unwrap_or(0);
-    let mut hits = Vec::new();
-    let mut found: Vec<(f64, usize, u32)> = Vec::new();
-    let lo = at.saturating_sub(6);
-    let hi = (at + 6).min(scene.by_time.len() - 1);
-    for &f in &scene.by_time[lo..=hi] {
-        let o = &scene.sights[f];
-        let dt = (o.t_yr - s.t_yr).abs();
-        if f == e || (dt > 6.0 && scene.by_time.len() > 12) {
-            continue;
-        }
-        let sigma = scene.dynamics.speed_mas_yr(x, y, s.t_yr);
-        let top = scene.dynamics.top_speed_mas_yr(x, y, s.t_yr);
-        // Far enough for fast stars where the field is empty; where it is full, only as far as
-        // chance neighbours of like magnitude stay few.
-        let per_mas2 = s.ln_star[d as usize].exp().max(1e-30);
-        let quiet = (1.5 / (std::f64::consts::PI * per_mas2)).sqrt();
-        let far = ((3.0 * sigma).min(top) * dt).max((top * dt).min(quiet));
-        let reach = far
-            + 3.0 * (s.data.cov_mas2[d as usize].max_var() + 4.0).sqrt()
-            + 0.1 * s.sensor.fwhm_mas;
-        o.tree.within(x, y, reach, &mut hits);
-        for h in &hits {
-            if !work.desks[f].holders.of(h.row as usize).is_empty() {
-                continue;
-            }
-            let dm = o.mag[h.row as usize] - m;
-            let z2 = if dm.is_finite() {
-                dm * dm / (o.mag_var[h.row as usize] + s.mag_var[d as usize])
-            } else {
-                1.0
-            };
-            if z2 > 60.0 {
-                continue;
-            }
-            let spread = sigma * sigma * dt * dt + 25.0;
-            let z2 = z2.min(6.0 + 0.15 * z2);
-            let q2 = h.dist_mas.powi(2) / spread;
-            let q2 = q2.min(8.0 + 0.05 * q2);
-            let score = -0.5 * (q2 + z2) - spread.ln() - if dt < 0.3 { 2.0 } else { 0.0 };
-            found.push((score, f, h.row));
-        }
-    }
-    found.sort_by(|a, b| b.0.total_cmp(&a.0).then((a.1, a.2).cmp(&(b.1, b.2))));
-    found.truncate(most);
-    found.into_iter().map(|f| (f.1, f.2)).collect()
 }
 
 /// What became of a weak star when it was looked at again.
@@ -392,109 +343,18 @@ fn far_apart(scene: &Scene, work: &Work, queue: &mut std::collections::VecDeque<
     batch
 }
 
-/// Campaigns of so few epochs begin with an assignment of pairs.
-const FEW_EPOCHS: usize = 3;
-
-/// Evidence from which a pair may teach the difference of the magnitude scales.
-const SECURE_NATS: f64 = 8.0;
-/// Scatter of the colours of stars between two instruments whose bands are not known to be the
-/// same (common practice, no source).
-const COLOUR_MAG: f64 = 0.2;
-
-/// First tracks of a campaign of two or three epochs: between its first two epochs the set of
-/// pairs with the largest total evidence (an assignment). With so little to hold a track
-/// together, taking the best pair first would let one star rob the next of its partner.
-fn pair_births(scene: &mut Scene, work: &mut Work) {
-    let &[first, second, ..] = scene.by_time.as_slice() else {
-        return;
-    };
-    if scene.sights[first].data.instrument != scene.sights[second].data.instrument {
-        for s in &mut scene.sights {
-            s.sensor.errors.mag_floor = s.sensor.errors.mag_floor.max(COLOUR_MAG);
-            apply_laws(s);
-        }
-    }
-    let mut steps: Vec<f64> = pairs(scene, work, first, second)
-        .iter()
-        .filter_map(|row| {
-            row.iter()
-                .max_by(|a, b| a.draft.worth.total_cmp(&b.draft.worth))
-        })
-        .filter(|p| p.draft.worth > SECURE_NATS && p.step_mag.is_finite())
-        .map(|p| p.step_mag)
-        .collect();
-    if steps.len() >= 2
-        && let Some(step) = order::median(&mut steps)
-    {
-        scene.sights[second].sensor.zero_point_mag -= step;
-        apply_laws(&mut scene.sights[second]);
-    }
-    let drafts = pairs(scene, work, first, second);
-    let mut starts = vec![0u32];
-    let (mut to, mut cost) = (Vec::new(), Vec::new());
-    for row in &drafts {
-        to.extend(row.iter().map(|p| p.row));
-        cost.extend(row.iter().map(|p| p.draft.worth));
-        starts.push(to.len() as u32);
-    }
-    let mut solver = Solver::default();
-    solver.max_weight(Edges {
-        n_right: scene.sights[second].len(),
-        first: &starts,
-        to: &to,
-        cost: &cost,
-    });
-    for (row, &mate) in drafts.iter().zip(solver.right_of_left()) {
-        if let Some(p) = row.iter().find(|p| p.row == mate) {
-            work.add(scene, p.draft.star.clone());
-        }
-    }
-}
-
-/// A detection of the second epoch that could be the same star.
-struct Pair {
-    row: u32,
-    draft: grow::Draft,
-    /// Magnitude there minus here.
-    step_mag: f64,
-}
-
-fn pairs(scene: &Scene, work: &Work, first: usize, second: usize) -> Vec<Vec<Pair>> {
-    (0..scene.sights[first].len() as u32)
-        .into_par_iter()
-        .map_init(Scratch::default, |sc, d| {
-            partners(scene, work, first, d, 8)
-                .into_iter()
-                .filter(|&(e, _)| e == second)
-                .filter_map(|(e, q)| {
-                    let draft = grow::grow(scene, work, &[(first, d), (e, q)], -25.0, None, sc)?;
-                    let step_mag =
-                        scene.sights[e].mag[q as usize] - scene.sights[first].mag[d as usize];
-                    (draft.worth > BIRTH_NATS && draft.star.cells[e] == Cell::Alone(q)).then_some(
-                        Pair {
-                            row: q,
-                            draft,
-                            step_mag,
-                        },
-                    )
-                })
-                .collect()
-        })
-        .collect()
-}
-
 /// Rounds of the scheme.
 const ROUNDS: usize = 3;
 
 /// The whole search.
-pub fn run(scene: &mut Scene, observer: &dyn Observer) -> Work {
+pub fn run(scene: &mut Scene, seeds: &Seeds, observer: &dyn Observer) -> Work {
     let mut work = Work::empty(scene);
     let mut tried = Tried::new(scene);
     if scene.sights.len() <= FEW_EPOCHS {
-        pair_births(scene, &mut work);
+        pairs::births(scene, seeds, &mut work);
     }
     observer.stage("first tracks", None);
-    births(scene, &mut work, &mut tried);
+    births(scene, seeds, &mut work, &mut tried);
     for round in 0..ROUNDS {
         observer.stage("assigning", Some((ROUNDS - round) as u64));
         for _ in 0..2 {
@@ -507,7 +367,8 @@ pub fn run(scene: &mut Scene, observer: &dyn Observer) -> Work {
         observer.stage("revising", None);
         revise(scene, &mut work);
         observer.stage("births", None);
-        births(scene, &mut work, &mut tried);
+        births(scene, seeds, &mut work, &mut tried);
+        revolving::births(scene, &mut work);
     }
     for _ in 0..2 {
         refresh(scene, &mut work);

@@ -20,6 +20,9 @@ const MAG_BIN: f64 = 0.5;
 /// Neighbours that a circle of the local density should hold on average.
 const CROWD: f64 = 12.0;
 
+/// Chance neighbours, per magnitude, among which a fast star is still looked for.
+const QUIET: f64 = 1.5;
+
 /// How crowded one list is, by place and by magnitude.
 #[derive(Clone, Debug)]
 pub struct Crowd {
@@ -50,6 +53,12 @@ impl Crowd {
             ln_per_mag,
             mag_start,
         }
+    }
+
+    /// Radius within which a chance neighbour of like magnitude is to be expected.
+    fn quiet_mas(&self, row: usize, mag: f64) -> f64 {
+        let per_mas2 = f64::from(self.density_mas2[row]) * self.ln_mag(mag).exp();
+        (QUIET / (std::f64::consts::PI * per_mas2)).sqrt()
     }
 
     fn ln_mag(&self, mag: f64) -> f64 {
@@ -114,40 +123,47 @@ pub struct EpochLinks {
     /// How many links a cap removed, on the earlier side and on the later side.
     pub capped_from: u64,
     pub capped_to: u64,
+    /// Rows of this epoch that lost links to the cap.
+    pub capped_rows: Vec<u32>,
+    /// (epoch, row) of later detections that lost links to the cap.
+    pub capped_later: Vec<(u32, u32)>,
+}
+
+/// One epoch as the search sees it.
+#[derive(Clone, Copy, Debug)]
+pub struct Listed<'a> {
+    pub list: &'a FieldEpoch,
+    pub tree: &'a Tree,
+    pub crowd: &'a Crowd,
 }
 
 /// All links from one epoch to later ones. `order[k]` is the index of the k-th epoch in time and
-/// `place` the position of the epoch at hand in that order; epochs, trees and crowds are indexed
-/// alike.
+/// `place` the position of the epoch at hand in that order.
 #[must_use]
-pub fn links_from(
-    place: usize,
-    order: &[usize],
-    epochs: &[FieldEpoch],
-    trees: &[Tree],
-    crowds: &[Crowd],
-    gates: &Gates,
-) -> EpochLinks {
-    let here = &epochs[order[place]];
+pub fn links_from(place: usize, order: &[usize], epochs: &[Listed], gates: &Gates) -> EpochLinks {
+    let own = &epochs[order[place]];
+    let here = own.list;
     let mut out = EpochLinks::default();
     let mut found: Vec<(u32, Link)> = Vec::new();
     let mut scratch = Scratch::default();
     let later = order[place + 1..]
         .iter()
         .take(gates.next_epochs)
-        .take_while(|&&e| epochs[e].time.yr() - here.time.yr() <= gates.window_yr);
+        .take_while(|&&e| epochs[e].list.time.yr() - here.time.yr() <= gates.window_yr);
     for &there in later {
         let start = found.len();
         for row in 0..here.len() {
-            let target = Target {
-                epoch: there,
-                list: &epochs[there],
-                tree: &trees[there],
-                crowd: &crowds[there],
-            };
-            out.capped_from += links_of_row(here, row, &target, gates, &mut scratch, &mut found);
+            let target = (there, &epochs[there]);
+            let over = links_of_row(own, row, target, gates, &mut scratch, &mut found);
+            if over > 0 {
+                out.capped_from += over;
+                out.capped_rows.push(row as u32);
+            }
         }
-        out.capped_to += cap_later_side(&mut found, start, epochs[there].len(), gates.cap);
+        let cut = cap_later_side(&mut found, start, epochs[there].list.len(), gates.cap);
+        out.capped_to += cut.iter().map(|c| u64::from(c.1)).sum::<u64>();
+        out.capped_later
+            .extend(cut.iter().map(|&(row, _)| (there as u32, row)));
     }
     found.sort_unstable_by_key(|(row, link)| (*row, link.epoch, link.row));
     out.first = vec![0; here.len() + 1];
@@ -161,14 +177,6 @@ pub fn links_from(
     out
 }
 
-/// The later list of a pair.
-struct Target<'a> {
-    epoch: usize,
-    list: &'a FieldEpoch,
-    tree: &'a Tree,
-    crowd: &'a Crowd,
-}
-
 #[derive(Default)]
 struct Scratch {
     hits: Vec<Hit>,
@@ -177,21 +185,22 @@ struct Scratch {
 
 /// Appends the links of one detection to one later epoch; returns how many the cap removed.
 fn links_of_row(
-    here: &FieldEpoch,
+    own: &Listed,
     row: usize,
-    target: &Target,
+    (epoch, target): (usize, &Listed),
     gates: &Gates,
     scratch: &mut Scratch,
     found: &mut Vec<(u32, Link)>,
 ) -> u64 {
-    let there = target.list;
+    let (here, there) = (own.list, target.list);
     let (x, y) = (here.x_mas[row], here.y_mas[row]);
     let dt_yr = there.time.yr() - here.time.yr();
     let prior = gates.motion_at(x, y);
     let floor = Cov2::round(2.0 * gates.floor_mas * gates.floor_mas);
     // The later error is not known before the query: take the same for both, then test.
     let err = (2.0 * here.cov_mas2[row].max_var() + floor.xx).sqrt();
-    let radius = prior.reach_mas(dt_yr) + gates.sigmas * err;
+    let quiet_mas = own.crowd.quiet_mas(row, here.mag[row]);
+    let radius = prior.search_mas(dt_yr, quiet_mas) + gates.sigmas * err;
     target.tree.within(x, y, radius, &mut scratch.hits);
     scratch.links.clear();
     for hit in &scratch.hits {
@@ -210,7 +219,7 @@ fn links_of_row(
         if ln_odds >= gates.min_ln_odds {
             scratch.links.push(Link {
                 row: hit.row,
-                epoch: target.epoch as u32,
+                epoch: epoch as u32,
                 ln_odds: ln_odds as f32,
                 blend: fit.blend,
             });
@@ -236,16 +245,25 @@ fn best_first(a: &Link, b: &Link) -> std::cmp::Ordering {
     order::by(f64::from(b.ln_odds), f64::from(a.ln_odds)).then(a.row.cmp(&b.row))
 }
 
-/// Keeps the best `cap` links into each later detection among `found[start..]`; returns how many
-/// went.
-fn cap_later_side(found: &mut Vec<(u32, Link)>, start: usize, n_later: usize, cap: usize) -> u64 {
-    let before = found.len();
+/// Keeps the best `cap` links into each later detection among `found[start..]`; returns the rows
+/// that lost links, each with how many.
+fn cap_later_side(
+    found: &mut Vec<(u32, Link)>,
+    start: usize,
+    n_later: usize,
+    cap: usize,
+) -> Vec<(u32, u32)> {
     let mut into = vec![0usize; n_later];
     for (_, link) in &found[start..] {
         into[link.row as usize] += 1;
     }
-    if into.iter().all(|&n| n <= cap) {
-        return 0;
+    let over: Vec<(u32, u32)> = (0..)
+        .zip(&into)
+        .filter(|&(_, &n)| n > cap)
+        .map(|(row, &n)| (row, (n - cap) as u32))
+        .collect();
+    if over.is_empty() {
+        return over;
     }
     let tail = &mut found[start..];
     tail.sort_unstable_by(|(ra, a), (rb, b)| {
@@ -268,7 +286,7 @@ fn cap_later_side(found: &mut Vec<(u32, Link)>, start: usize, n_later: usize, ca
         }
     }
     found.truncate(kept);
-    (before - kept) as u64
+    over
 }
 
 /// All links, detections numbered through: epoch by epoch in the order of the campaign.
@@ -284,12 +302,18 @@ pub struct CandidateGraph {
     pub blend: Vec<bool>,
     /// Links removed by the cap on either side.
     pub capped: u64,
+    /// Detections that lost links to the cap.
+    pub cut: Vec<bool>,
+    /// Links into detection d are numbers `first_in[d]..first_in[d + 1]` of `from`.
+    first_in: Vec<u32>,
+    /// (earlier detection, its link), by later detection.
+    from: Vec<(u32, u32)>,
 }
 
 impl CandidateGraph {
     /// Joins the links of all epochs; `parts[e]` belongs to epoch e of the campaign.
     #[must_use]
-    pub fn join(epochs: &[FieldEpoch], parts: &[EpochLinks]) -> Self {
+    pub fn join(parts: &[EpochLinks]) -> Self {
         let n_links = parts.iter().map(|p| p.links.len()).sum();
         let mut g = Self {
             offset: vec![0],
@@ -297,14 +321,15 @@ impl CandidateGraph {
             to: Vec::with_capacity(n_links),
             ln_odds: Vec::with_capacity(n_links),
             blend: Vec::with_capacity(n_links),
-            capped: 0,
+            ..Self::default()
         };
         let mut n = 0;
-        for epoch in epochs {
-            n += epoch.len() as u32;
+        for part in parts {
+            n += part.first.len().saturating_sub(1) as u32;
             g.offset.push(n);
         }
-        for part in parts {
+        g.cut = vec![false; n as usize];
+        for (e, part) in parts.iter().enumerate() {
             for row in part.first.windows(2) {
                 for link in &part.links[row[0] as usize..row[1] as usize] {
                     g.to.push(g.offset[link.epoch as usize] + link.row);
@@ -314,8 +339,33 @@ impl CandidateGraph {
                 g.first.push(g.to.len() as u32);
             }
             g.capped += part.capped_from + part.capped_to;
+            let own = part.capped_rows.iter().map(|&row| (e as u32, row));
+            for (epoch, row) in own.chain(part.capped_later.iter().copied()) {
+                g.cut[(g.offset[epoch as usize] + row) as usize] = true;
+            }
         }
+        g.turn_round(n as usize);
         g
+    }
+
+    /// The same links by their later detection (a counting sort).
+    fn turn_round(&mut self, n_detections: usize) {
+        let mut next = vec![0u32; n_detections + 1];
+        for &d in &self.to {
+            next[d as usize + 1] += 1;
+        }
+        for d in 0..n_detections {
+            next[d + 1] += next[d];
+        }
+        self.first_in.clone_from(&next);
+        self.from = vec![(0, 0); self.to.len()];
+        for d in 0..n_detections {
+            for link in self.first[d]..self.first[d + 1] {
+                let slot = &mut next[self.to[link as usize] as usize];
+                self.from[*slot as usize] = (d as u32, link);
+                *slot += 1;
+            }
+        }
     }
 
     /// Links of a detection: (later detection, ln odds, blend).
@@ -327,6 +377,25 @@ impl CandidateGraph {
                 self.blend[k],
             )
         })
+    }
+
+    /// Links into a detection: (earlier detection, ln odds, blend).
+    pub fn earlier(&self, detection: usize) -> impl Iterator<Item = (usize, f64, bool)> + '_ {
+        (self.first_in[detection] as usize..self.first_in[detection + 1] as usize).map(|k| {
+            let (from, link) = self.from[k];
+            let link = link as usize;
+            (
+                from as usize,
+                f64::from(self.ln_odds[link]),
+                self.blend[link],
+            )
+        })
+    }
+
+    /// Number of a detection.
+    #[must_use]
+    pub fn number(&self, epoch: usize, row: usize) -> usize {
+        self.offset[epoch] as usize + row
     }
 
     /// Epoch and row of a detection number.

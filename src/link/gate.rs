@@ -2,21 +2,23 @@
 //!
 //! Gate: a star seen at projected radius R from the mass moves at most
 //! v_max(R) dt + mu / (2 R^2) dt^2 in dt, plus a few standard errors, where v_max is the larger of
-//! the escape speed sqrt(2 mu / R) and the tail of the speed prior.
+//! the escape speed sqrt(2 mu / R) and a speed that few of the bulk of the stars exceed. Where the
+//! speed prior has a tail, faster stars are looked for as far as chance neighbours of like
+//! magnitude stay few.
 //!
 //! Odds: the Bayes factor "one star" against "two unrelated detections" of Budavari & Szalay
 //! (2008, ApJ 679, 301) with an unknown proper motion (Kerekes et al. 2010, ApJ 719, 59). For two
 //! epochs and Gaussian priors it is closed: the offset is normal with covariance
 //! R1 + R2 + sigma_v^2 dt^2 + sigma_a^2 dt^4 / 4, compared with the local density of the second
 //! list; magnitudes give an independent factor. The speed prior is
-//! sigma_v^2 = sigma_0^2 + mu / ((1 + gamma) R), with an optional wide foreground component.
+//! sigma_v^2 = sigma_0^2 + mu / ((1 + gamma) R), with an optional tail of fast stars.
 //!
 //! Fails where the acceleration is far from constant between the two epochs (inside about
 //! 100 mas of the mass over a year): the gate stays open there, but the odds are rough.
 
 use crate::maths::cov2::Cov2;
 use crate::maths::lnprob::{ln_add, ln_normal};
-use crate::model::campaign::Foreground;
+use crate::motion::state::{TOP_SPEEDS, Wide};
 
 /// Share of stars that may be faster than the gate allows.
 const SPEED_TAIL: f64 = 1e-4;
@@ -40,7 +42,8 @@ pub struct Centre {
 pub struct Gates {
     /// One-dimensional speed dispersion far from the mass.
     pub speed_mas_yr: f64,
-    pub foreground: Option<Foreground>,
+    /// Fast stars, by the law of the motion prior.
+    pub tail: Option<Wide>,
     pub centre: Option<Centre>,
     /// Slope gamma of the star density, r^-gamma, in the speed dispersion near the mass.
     pub density_slope: f64,
@@ -69,7 +72,7 @@ impl Gates {
     pub fn new(speed_mas_yr: f64, centre: Option<Centre>) -> Self {
         Self {
             speed_mas_yr,
-            foreground: None,
+            tail: None,
             centre,
             density_slope: 1.75,
             sigmas: 4.0,
@@ -90,13 +93,10 @@ impl Gates {
         let sigma0_2 = self.speed_mas_yr * self.speed_mas_yr;
         let mut prior = MotionPrior {
             speed_var: sigma0_2,
-            speed_max_mas_yr: rayleigh_tail(self.speed_mas_yr, 1.0),
+            speed_max_mas_yr: self.speed_mas_yr * (-2.0 * SPEED_TAIL.ln()).sqrt(),
+            tail_max_mas_yr: self.tail.map_or(0.0, |t| TOP_SPEEDS * t.speed_mas_yr),
             accel_max_mas_yr2: 0.0,
         };
-        if let Some(f) = self.foreground {
-            let tail = rayleigh_tail(f.speed_mas_yr, f.fraction);
-            prior.speed_max_mas_yr = prior.speed_max_mas_yr.max(tail);
-        }
         if let Some(c) = self.centre {
             let r = (x_mas - c.x_mas)
                 .hypot(y_mas - c.y_mas)
@@ -116,11 +116,17 @@ impl Gates {
         let accel = ACCELERATION_SHARE * prior.accel_max_mas_yr2 * 0.5 * dt2;
         let steady = errors + Cov2::round(accel * accel);
         let near = (steady + Cov2::round(prior.speed_var * dt2)).ln_normal(d_mas[0], d_mas[1]);
-        match self.foreground {
-            Some(f) if f.fraction > 0.0 && f.fraction < 1.0 => {
-                let var = f.speed_mas_yr * f.speed_mas_yr * dt2;
-                let far = (steady + Cov2::round(var)).ln_normal(d_mas[0], d_mas[1]);
-                ln_add((1.0 - f.fraction).ln() + near, f.fraction.ln() + far)
+        match self.tail {
+            // The tail is smooth over the errors: they widen its scale, no more.
+            Some(t) if t.fraction > 0.0 && t.fraction < 1.0 && dt2 > 0.0 => {
+                let scale2 = t.speed_mas_yr.powi(2) + steady.max_var() / dt2;
+                let v2 = (d_mas[0].powi(2) + d_mas[1].powi(2)) / dt2;
+                let far = Wide {
+                    speed_mas_yr: scale2.sqrt(),
+                    ..t
+                };
+                let far = t.fraction.ln() + far.ln_density(v2) - dt2.ln();
+                ln_add((1.0 - t.fraction).ln() + near, far)
             }
             _ => near,
         }
@@ -163,15 +169,25 @@ pub struct MotionPrior {
     /// Variance of one component \[mas^2/yr^2\].
     pub speed_var: f64,
     pub speed_max_mas_yr: f64,
+    /// Largest speed in the tail of fast stars, zero without one.
+    pub tail_max_mas_yr: f64,
     pub accel_max_mas_yr2: f64,
 }
 
 impl MotionPrior {
-    /// Farthest a star can move in `dt_yr`.
+    /// Farthest a star of the bulk can move in `dt_yr`.
     #[must_use]
     pub fn reach_mas(self, dt_yr: f64) -> f64 {
         let dt = dt_yr.abs();
         self.speed_max_mas_yr * dt + 0.5 * self.accel_max_mas_yr2 * dt * dt
+    }
+
+    /// How far to look for a star after `dt_yr`: as far as the bulk goes, and for stars of the
+    /// tail as far as `quiet_mas`, within which chance neighbours are few.
+    #[must_use]
+    pub fn search_mas(self, dt_yr: f64, quiet_mas: f64) -> f64 {
+        let tail = (self.tail_max_mas_yr * dt_yr.abs()).min(quiet_mas);
+        self.reach_mas(dt_yr).max(tail)
     }
 }
 
@@ -187,15 +203,6 @@ pub struct MagFit {
     pub ln_factor: f64,
     /// One of the two is too bright to be the star alone.
     pub blend: bool,
-}
-
-/// Speed exceeded by a share [`SPEED_TAIL`] of all stars when `fraction` of them have this
-/// dispersion (two-dimensional normal).
-fn rayleigh_tail(sigma_mas_yr: f64, fraction: f64) -> f64 {
-    if fraction <= SPEED_TAIL {
-        return 0.0;
-    }
-    sigma_mas_yr * (2.0 * (fraction / SPEED_TAIL).ln()).sqrt()
 }
 
 #[cfg(test)]

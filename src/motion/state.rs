@@ -31,8 +31,20 @@ pub struct Wide {
     pub speed_mas_yr: f64,
 }
 
+impl Wide {
+    /// ln of the density of the fast stars' velocity \[(mas/yr)^-2\] at a squared speed: as
+    /// 1 / (1 + v^2 / s^2) up to [`TOP_SPEEDS`] s, so that each factor of two in speed beyond s is
+    /// as likely as the next (Jeffreys 1939; from memory).
+    #[must_use]
+    pub fn ln_density(self, v2: f64) -> f64 {
+        let s2 = self.speed_mas_yr * self.speed_mas_yr;
+        let norm = std::f64::consts::PI * s2 * (1.0 + TOP_SPEEDS * TOP_SPEEDS).ln();
+        -norm.ln() - (1.0 + v2 / s2).ln()
+    }
+}
+
 /// Speeds up to so many times the tail's width are looked for where the field is empty enough.
-const TOP_SPEEDS: f64 = 200.0;
+pub const TOP_SPEEDS: f64 = 200.0;
 
 /// How stars of this field move.
 #[derive(Clone, Copy, Debug, PartialEq)]
@@ -175,9 +187,7 @@ impl Dynamics {
     }
 }
 
-/// Velocity: a Gaussian core and a tail without a scale of its own, density as
-/// 1 / (1 + v^2 / s^2) up to [`TOP_SPEEDS`] s: beyond the core, each factor of two in speed is as
-/// likely as the next (Jeffreys 1939; from memory). Acceleration: a Gaussian. The curvature is
+/// Velocity: a Gaussian core and the tail of [`Wide`]. Acceleration: a Gaussian. The curvature is
 /// that of the component mix at hand, which keeps Newton steps safe.
 fn free_prior(speed: f64, accel: f64, wide: Wide, p: &P6) -> Prior {
     let v2 = p[2] * p[2] + p[3] * p[3];
@@ -185,8 +195,7 @@ fn free_prior(speed: f64, accel: f64, wide: Wide, p: &P6) -> Prior {
     let s2 = wide.speed_mas_yr * wide.speed_mas_yr;
     let core =
         (1.0 - wide.fraction).ln() - two_pi.ln() - 2.0 * speed.ln() - 0.5 * v2 / (speed * speed);
-    let norm = 0.5 * two_pi * s2 * (1.0 + TOP_SPEEDS * TOP_SPEEDS).ln();
-    let far = wide.fraction.ln() - norm.ln() - (1.0 + v2 / s2).ln();
+    let far = wide.fraction.ln() + wide.ln_density(v2);
     let total = crate::maths::lnprob::ln_add(core, far);
     let w = (core - total).exp();
     let iv = w / (speed * speed) + (1.0 - w) * 2.0 / (s2 + v2);

@@ -194,13 +194,46 @@ pub fn grow(
     own: Option<u32>,
     sc: &mut Scratch,
 ) -> Option<Draft> {
-    let (e0, d0) = seed[0];
-    let t0 = scene.sights[e0].t_yr;
+    let t0 = scene.sights[seed[0].0].t_yr;
+    observe(scene, seed, sc);
+    let fit = first_fit(scene, &sc.obs, t0)?;
+    grow_along(scene, work, seed, fit, floor, own, sc)
+}
+
+/// Grow a track from seed detections and a first guess of its motion at the time of the first.
+#[must_use]
+pub fn grow_from(
+    scene: &Scene,
+    work: &Work,
+    seed: &[(usize, u32)],
+    start: &P6,
+    floor: f64,
+    sc: &mut Scratch,
+) -> Option<Draft> {
+    let t0 = scene.sights[seed[0].0].t_yr;
+    observe(scene, seed, sc);
+    let fit = state_fit::fit(&scene.dynamics, &sc.obs, t0, start, 20)?;
+    grow_along(scene, work, seed, fit, floor, None, sc)
+}
+
+fn observe(scene: &Scene, seed: &[(usize, u32)], sc: &mut Scratch) {
     sc.obs.clear();
     for &(e, d) in seed {
         sc.obs.push(work::observation(scene, e, d as usize, 0.0));
     }
-    let fit = first_fit(scene, &sc.obs, t0)?;
+}
+
+fn grow_along(
+    scene: &Scene,
+    work: &Work,
+    seed: &[(usize, u32)],
+    fit: Fit,
+    floor: f64,
+    own: Option<u32>,
+    sc: &mut Scratch,
+) -> Option<Draft> {
+    let (e0, d0) = seed[0];
+    let t0 = scene.sights[e0].t_yr;
     let s0 = &scene.sights[e0];
     let n_epoch = scene.sights.len();
     let mag0 = if s0.mag[d0 as usize].is_finite() {

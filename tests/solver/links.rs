@@ -1,6 +1,6 @@
 //! The candidate graph against a scan over all pairs.
 
-use asterskein::link::candidates::{CandidateGraph, Crowd, EpochLinks, links_from};
+use asterskein::link::candidates::{CandidateGraph, Crowd, EpochLinks, Listed, links_from};
 use asterskein::link::gate::{Centre, Gates, Mag};
 use asterskein::maths::cov2::Cov2;
 use asterskein::model::detection::FieldEpoch;
@@ -77,9 +77,14 @@ fn all_links(epochs: &[FieldEpoch], gates: &Gates) -> Vec<EpochLinks> {
         .collect();
     let mut order: Vec<usize> = (0..epochs.len()).collect();
     order.sort_by(|&a, &b| epochs[a].time.yr().total_cmp(&epochs[b].time.yr()));
+    let listed: Vec<Listed> = epochs
+        .iter()
+        .zip(trees.iter().zip(&crowds))
+        .map(|(list, (tree, crowd))| Listed { list, tree, crowd })
+        .collect();
     let mut parts = vec![EpochLinks::default(); epochs.len()];
     for place in 0..order.len() {
-        parts[order[place]] = links_from(place, &order, epochs, &trees, &crowds, gates);
+        parts[order[place]] = links_from(place, &order, &listed, gates);
     }
     parts
 }
@@ -131,7 +136,7 @@ fn links_are_the_pairs_a_scan_finds() {
 fn true_pairs_are_linked_and_lead() {
     let times = [2000.0, 2000.5, 2001.2, 2002.0];
     let epochs = field(11, &times);
-    let graph = CandidateGraph::join(&epochs, &all_links(&epochs, &gates()));
+    let graph = CandidateGraph::join(&all_links(&epochs, &gates()));
     let (mut linked, mut leading, mut total) = (0, 0, 0);
     for d in 0..3 * STARS {
         let (epoch, row) = graph.place(d);
