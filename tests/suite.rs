@@ -3,6 +3,7 @@ mod cli;
 mod frames;
 mod inject;
 mod layering;
+mod linking;
 mod motion;
 mod reading;
 mod readme;

@@ -1,0 +1,43 @@
+//! Whole campaigns through the engine, against what is known of them.
+
+mod planets;
+
+use std::collections::BTreeMap;
+use std::path::{Path, PathBuf};
+
+use asterskein::engine::{Linked, Settings, Silent, link_lists};
+use asterskein::io::{campaign::read_campaign, lists::read_lists};
+
+fn fixture(name: &str) -> PathBuf {
+    Path::new(env!("CARGO_MANIFEST_DIR"))
+        .join("fixtures")
+        .join(name)
+}
+
+/// A linked campaign, and the ids of each track's members by epoch.
+struct Field {
+    linked: Linked,
+    members: Vec<BTreeMap<usize, String>>,
+}
+
+fn link(folder: &Path) -> Field {
+    let (campaign, _) =
+        read_campaign(&folder.join("campaign.toml")).unwrap_or_else(|f| panic!("{f}"));
+    let (lists, _) = read_lists(&campaign).unwrap_or_else(|f| panic!("{f}"));
+    let linked = link_lists(&campaign, &lists, &Settings::default(), &Silent).unwrap();
+    let mut members = vec![BTreeMap::new(); linked.solution.tracks.len()];
+    for m in &linked.solution.members {
+        let id = lists[m.epoch].ids.text(m.row).to_string();
+        members[m.track].insert(m.epoch, id);
+    }
+    Field { linked, members }
+}
+
+/// Rows of a small table, without its header.
+fn rows(path: &Path) -> Vec<Vec<String>> {
+    let text = std::fs::read_to_string(path).unwrap();
+    text.lines()
+        .skip(1)
+        .map(|line| line.split(',').map(str::to_owned).collect())
+        .collect()
+}
