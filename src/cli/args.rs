@@ -48,6 +48,8 @@ pub enum Command {
     Link(commands::link::Args),
     /// Draw a result again, or a part of it.
     Report(commands::report::Args),
+    /// Weigh claimed objects against everything else that could have made their positions.
+    Audit(commands::audit::Args),
     /// Put made-up stars into the lists of a result, link again, and count what is found.
     Recover(commands::recover::Args),
     /// Write observations, start orbits and conventions of chosen tracks for an orbit fitter.

@@ -61,6 +61,7 @@ pub fn run() -> Exit {
 
 fn dispatch(command: Command, printer: &Printer, threads: usize) -> anyhow::Result<Exit> {
     match command {
+        Command::Audit(a) => commands::audit::run(&a, printer, threads),
         Command::Check(a) => commands::check::run(&a, printer),
         Command::Explain(a) => commands::explain::run(&a, printer),
         Command::Link(a) => commands::link::run(&a, printer, threads),

@@ -7,6 +7,7 @@ pub mod orbits;
 pub mod pairs;
 pub mod pipeline;
 pub mod prepare;
+pub mod reopen;
 pub mod revolving;
 pub mod rounds;
 pub mod rulings;

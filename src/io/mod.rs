@@ -3,6 +3,7 @@
 
 pub mod campaign;
 pub mod check;
+pub mod claims;
 pub mod dates;
 pub mod ecsv_read;
 pub mod ecsv_write;

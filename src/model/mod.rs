@@ -2,6 +2,7 @@
 
 pub mod campaign;
 pub mod change;
+pub mod claim;
 pub mod detection;
 pub mod flag;
 pub mod known;

@@ -1,5 +1,6 @@
 //! One file per command.
 
+pub mod audit;
 pub mod check;
 pub mod explain;
 pub mod handoff;

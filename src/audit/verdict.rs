@@ -1,0 +1,160 @@
+//! From odds to careful words.
+
+use super::path::Part;
+use super::rivals::Rivals;
+use super::search::Candidate;
+use crate::maths::lnprob::logistic;
+
+/// ln odds above which a claim stands, and below whose negative a rival wins \[nats\].
+const STANDS_NATS: f64 = 3.0;
+const FALLS_NATS: f64 = 3.0;
+/// Chance rate below which a claim may stand.
+const STANDS_P: f64 = 0.01;
+/// ln odds of a claim for which no star at all was found \[nats\].
+const NO_STAR_NATS: f64 = -12.0;
+/// Beyond this, odds only say that the models are too simple \[nats\].
+const MOST_NATS: f64 = 30.0;
+/// Nats are divided by this before they become odds: models are never quite right.
+const TEMPERATURE: f64 = 3.0;
+/// A known star that explains a detection this well \[nats\] is robbed when the claim takes it, at
+/// the cost of being missed there.
+const ROBBED_GAIN: f64 = 4.0;
+const ROBBED_NATS: f64 = -1.5;
+/// Shares of a claim's detections that name the winning rival.
+const MOSTLY_FREE: f64 = 0.6;
+const MOSTLY_ONE: f64 = 0.6;
+const MOSTLY_BLENDS: f64 = 0.7;
+
+/// What is thought of a claim.
+#[derive(Clone, Copy, Debug, PartialEq, Eq, PartialOrd, Ord)]
+pub enum Verdict {
+    /// A star of its own, as far as these lists can tell.
+    Stands,
+    /// One known star, seen in passing.
+    KnownStar,
+    /// Blends of known stars.
+    Blend,
+    /// Detections of several known stars.
+    StrungTogether,
+    /// Something that keeps to a bright star.
+    Artefact,
+    /// Unconnected, probably false detections.
+    Chance,
+    /// The lists do not decide.
+    Undecided,
+}
+
+impl Verdict {
+    pub const ALL: [Self; 7] = [
+        Self::Stands,
+        Self::KnownStar,
+        Self::Blend,
+        Self::StrungTogether,
+        Self::Artefact,
+        Self::Chance,
+        Self::Undecided,
+    ];
+
+    /// The word used in tables.
+    #[must_use]
+    pub fn word(self) -> &'static str {
+        match self {
+            Self::Stands => "stands",
+            Self::KnownStar => "known_star",
+            Self::Blend => "blend",
+            Self::StrungTogether => "strung_together",
+            Self::Artefact => "artefact",
+            Self::Chance => "chance",
+            Self::Undecided => "undecided",
+        }
+    }
+
+    /// A sentence for people.
+    #[must_use]
+    pub fn sentence(self) -> &'static str {
+        match self {
+            Self::Stands => "the lists favour a star of its own",
+            Self::KnownStar => "the lists favour one known star seen in passing",
+            Self::Blend => "the lists favour blends of known stars",
+            Self::StrungTogether => "the lists favour detections of several known stars",
+            Self::Artefact => "the lists favour an artefact that keeps to a bright star",
+            Self::Chance => "the lists favour unconnected, probably false detections",
+            Self::Undecided => "the lists do not decide",
+        }
+    }
+}
+
+/// Odds of a claim: that it is one real star of its own.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct Odds {
+    pub ln_odds: f64,
+    /// What it is made of \[nats\]: the path through the claimed positions, epochs at which the
+    /// claim is silent, known stars robbed of detections they explain well.
+    pub path: f64,
+    pub silent: f64,
+    pub robbed: f64,
+}
+
+impl Odds {
+    #[must_use]
+    pub fn of(candidate: Option<&Candidate>, rivals: &Rivals) -> Self {
+        let Some(c) = candidate else {
+            return Self {
+                ln_odds: NO_STAR_NATS,
+                path: NO_STAR_NATS,
+                silent: 0.0,
+                robbed: 0.0,
+            };
+        };
+        let robbed = (0..rivals.places.len())
+            .filter(|&k| c.part(k) == Some(Part::Core))
+            .filter(|&k| {
+                let w = &rivals.places[k];
+                w.holders.len() == 1 && w.gain > ROBBED_GAIN
+            })
+            .count() as f64
+            * ROBBED_NATS;
+        let sum = c.path.ln_odds + c.silent_nats() + robbed;
+        Self {
+            ln_odds: (sum / TEMPERATURE).clamp(-MOST_NATS, MOST_NATS),
+            path: c.path.ln_odds,
+            silent: c.silent_nats(),
+            robbed,
+        }
+    }
+
+    #[must_use]
+    pub fn p_real(self) -> f64 {
+        logistic(self.ln_odds)
+    }
+}
+
+/// The verdict on odds, chance and the rivals.
+#[must_use]
+pub fn verdict(odds: Odds, chance_p: f64, rivals: &Rivals) -> Verdict {
+    if odds.ln_odds > STANDS_NATS && chance_p < STANDS_P {
+        Verdict::Stands
+    } else if odds.ln_odds < -FALLS_NATS {
+        best_rival(rivals)
+    } else {
+        Verdict::Undecided
+    }
+}
+
+/// The rival that explains most of the claim's detections.
+#[must_use]
+pub fn best_rival(r: &Rivals) -> Verdict {
+    if r.free >= MOSTLY_FREE {
+        if r.is_artefact() {
+            Verdict::Artefact
+        } else {
+            Verdict::Chance
+        }
+    } else if r.main.is_some_and(|(_, share)| share >= MOSTLY_ONE) {
+        Verdict::KnownStar
+    } else if r.blend + r.free >= MOSTLY_BLENDS {
+        Verdict::Blend
+    } else {
+        Verdict::StrungTogether
+    }
+}
