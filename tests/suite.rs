@@ -1,4 +1,5 @@
 //! All integration tests, one binary.
+mod audit;
 mod cli;
 mod frames;
 mod inject;

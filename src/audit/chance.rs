@@ -11,8 +11,10 @@ use rand::{Rng, RngExt, SeedableRng};
 use rand_chacha::ChaCha8Rng;
 
 use super::claims::Case;
-use super::path::{self, Point};
-use super::search::{self, EFFORT};
+use super::path::{self, Effort, Point};
+use super::search;
+use crate::motion::state::P6;
+use crate::motion::state_fit::Fit;
 use crate::near::Hit;
 use crate::resolve::scene::{Scene, Sight};
 use crate::resolve::star::Group;
@@ -25,6 +27,12 @@ const HOST_FWHM: f64 = 3.5;
 const TURNED_FWHM: f64 = 1.5;
 const EXCHANGED_FWHM: f64 = 0.75;
 
+/// Scrambled positions lie about the claim's own path, which is the first start.
+const EFFORT: Effort = Effort {
+    anchors: 1,
+    refined: 3,
+};
+
 /// What is scrambled.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
 pub enum Null {
@@ -35,13 +43,13 @@ pub enum Null {
 }
 
 /// ln odds of the best path in one scrambled campaign \[nats\]; `-inf` without three positions.
-/// `own`: the claimed star in the run, which counts as leftover.
+/// `own`: the claimed star in the run, which counts as leftover; `claimed`: the claim's path.
 #[must_use]
 pub fn scrambled(
     scene: &Scene,
     work: &Work,
     case: &Case,
-    (null, own): (Null, Option<u32>),
+    (null, own, claimed): (Null, Option<u32>, Option<&Fit>),
     seed: u64,
     stream: u64,
 ) -> f64 {
@@ -51,7 +59,8 @@ pub fn scrambled(
         Null::Turned => turned(scene, work, case, own, &mut rng),
         Null::Exchanged => exchanged(scene, case, &mut rng),
     };
-    path::best(&scene.dynamics, &points, &[], EFFORT).map_or(f64::NEG_INFINITY, |p| p.ln_odds)
+    let hints: Vec<(f64, P6)> = claimed.iter().map(|f| (f.t0_yr, f.p)).collect();
+    path::best(&scene.dynamics, &points, &hints, EFFORT).map_or(f64::NEG_INFINITY, |p| p.ln_odds)
 }
 
 /// Does no star but `own` hold a detection?

@@ -85,7 +85,9 @@ impl Judged {
             Null::Exchanged
         };
         let own = self.candidate.as_ref().and_then(|c| c.own);
-        chance::scrambled(&run.scene, &run.work, &self.case, (null, own), seed, stream)
+        let fit = self.candidate.as_ref().map(|c| &c.path.fit);
+        let how = (null, own, fit);
+        chance::scrambled(&run.scene, &run.work, &self.case, how, seed, stream)
     }
 
     /// Takes the scrambled campaigns into account and decides.

@@ -37,8 +37,11 @@ pub struct Point {
 const CORE: f64 = 0.55;
 const BLEND: f64 = 0.42;
 const STRANGER: f64 = 0.03;
-/// Displacement of blends, and of strangers, per axis \[fwhm\].
+/// Displacement of blends, and of strangers, per axis \[fwhm\]; the less of the light a star
+/// gives, the farther from it a blend lies.
 const BLEND_FWHM: f64 = 0.20;
+const BLEND_LEAST_FWHM: f64 = 0.06;
+const BLEND_GROWTH_FWHM: f64 = 0.26;
 const STRANGER_FWHM: f64 = 1.5;
 /// Scatter about a path that nobody follows, per axis \[fwhm\].
 const STRAY_FWHM: f64 = 0.38;
@@ -109,6 +112,10 @@ const SHORTEST_YR: f64 = 0.1;
 const FEW_POINTS: usize = 12;
 /// Whole revolutions between two positions of a triple.
 const MOST_TURNS: u32 = 1;
+/// Scales added to errors \[fwhm\] while a start is refined, with the steps taken at each.
+const SCALES: [(f64, usize); 4] = [(0.15, 6), (0.04, 6), (0.01, 8), (0.0, 12)];
+/// Depths of slow starts, over the distance from the mass on the sky.
+const SLOW_DEPTHS: [f64; 3] = [0.5, 1.5, 4.0];
 /// Starts that stay within so many fwhm of each other are one.
 const SAME_FWHM: f64 = 0.15;
 
@@ -123,10 +130,17 @@ pub fn best(
     if points.len() < 3 {
         return None;
     }
-    let mut starts: Vec<(f64, f64, P6)> = Vec::new();
-    for &(t0, p) in hints.iter().chain(&starts_of(dynamics, points, effort)) {
-        starts.push((rough(dynamics, points, t0, &p), t0, p));
+    let mut raw: Vec<(f64, P6)> = Vec::new();
+    for &(t0, p) in hints {
+        raw.push((t0, p));
+        raw.extend(astray(dynamics, points, t0, &p).map(|fit| (t0, fit.p)));
     }
+    raw.extend(starts_of(dynamics, points, effort));
+    raw.extend(slow_starts(dynamics, points));
+    let mut starts: Vec<(f64, f64, P6)> = raw
+        .into_iter()
+        .map(|(t0, p)| (rough(dynamics, points, t0, &p), t0, p))
+        .collect();
     starts.sort_by(|a, b| b.0.total_cmp(&a.0));
     let mut best: Option<Path> = None;
     let mut tried: Vec<[[f64; 2]; 3]> = Vec::new();
@@ -236,6 +250,31 @@ fn starts_of(dynamics: &Dynamics, points: &[Point], effort: Effort) -> Vec<(f64,
     out
 }
 
+/// Starts that need no orbit through a triple: the mean place and velocity of all positions, at a
+/// few depths, drawn to them as a path that nobody follows.
+fn slow_starts(dynamics: &Dynamics, points: &[Point]) -> Vec<(f64, P6)> {
+    let n = points.len() as f64;
+    let mean = |f: &dyn Fn(&Point) -> f64| points.iter().map(f).sum::<f64>() / n;
+    let (t0, x, y) = (mean(&|o| o.t_yr), mean(&|o| o.x_mas), mean(&|o| o.y_mas));
+    let spread = mean(&|o| (o.t_yr - t0).powi(2)).max(1e-6);
+    let vx = mean(&|o| (o.t_yr - t0) * (o.x_mas - x)) / spread;
+    let vy = mean(&|o| (o.t_yr - t0) * (o.y_mas - y)) / spread;
+    let (cx, cy) = dynamics.centre_at(t0);
+    let depth = (x - cx).hypot(y - cy).max(20.0);
+    let guesses: Vec<P6> = if dynamics.is_central() {
+        SLOW_DEPTHS
+            .iter()
+            .map(|z| P6::new(x - cx, y - cy, z * depth, vx, vy, 0.0))
+            .collect()
+    } else {
+        vec![P6::new(x, y, vx, vy, 0.0, 0.0)]
+    };
+    guesses
+        .iter()
+        .filter_map(|p| Some((t0, astray(dynamics, points, t0, p)?.p)))
+        .collect()
+}
+
 /// Quick rank of a start.
 fn rough(dynamics: &Dynamics, points: &[Point], t0: f64, p: &P6) -> f64 {
     points
@@ -255,7 +294,7 @@ fn refine(dynamics: &Dynamics, points: &[Point], t0: f64, start: &P6) -> Option<
     let mut p = *start;
     let mut fit: Option<Fit> = None;
     let mut obs: Vec<Obs> = Vec::with_capacity(points.len());
-    for scale in [0.15, 0.05, 0.015, 0.0, 0.0] {
+    for (scale, steps) in SCALES {
         // Strangers are left out, unless hardly anything would remain.
         for limit in [16.0, f64::INFINITY] {
             obs.clear();
@@ -279,11 +318,29 @@ fn refine(dynamics: &Dynamics, points: &[Point], t0: f64, start: &P6) -> Option<
                 break;
             }
         }
-        let f = state_fit::fit(dynamics, &obs, t0, &p, 12)?;
+        let f = state_fit::fit(dynamics, &obs, t0, &p, steps)?;
         p = f.p;
         fit = Some(f);
     }
     weigh(dynamics, points, fit?)
+}
+
+fn stray_cov(o: &Point) -> Cov2 {
+    o.cov + Cov2::round((STRAY_FWHM * o.fwhm_mas).powi(2))
+}
+
+/// The path that nobody follows: every position is scattered about it.
+fn astray(dynamics: &Dynamics, points: &[Point], t0: f64, start: &P6) -> Option<Fit> {
+    let obs: Vec<Obs> = points
+        .iter()
+        .map(|o| Obs {
+            t_yr: o.t_yr,
+            x_mas: o.x_mas,
+            y_mas: o.y_mas,
+            cov: stray_cov(o),
+        })
+        .collect();
+    state_fit::fit(dynamics, &obs, t0, start, 12)
 }
 
 fn weigh(dynamics: &Dynamics, points: &[Point], fit: Fit) -> Option<Path> {
@@ -325,6 +382,12 @@ fn weigh(dynamics: &Dynamics, points: &[Point], fit: Fit) -> Option<Path> {
     for (k, o) in points.iter().enumerate() {
         let mut l = like(k);
         if let Some(mag) = mag.filter(|_| o.mag.is_finite()) {
+            let share = (0.4 * std::f64::consts::LN_10 * (o.mag - mag))
+                .exp()
+                .min(1.0);
+            let far = (BLEND_LEAST_FWHM + BLEND_GROWTH_FWHM * (1.0 - share)) * o.fwhm_mas;
+            let [dx, dy] = offsets[k];
+            l[1] = BLEND.ln() + (o.cov + Cov2::round(far * far)).ln_normal(dx, dy);
             // Relative to the spread of unrelated detections.
             let d = o.mag - mag;
             let var = o.mag_var + MAG_EXTRA * MAG_EXTRA;
@@ -351,21 +414,12 @@ fn weigh(dynamics: &Dynamics, points: &[Point], fit: Fit) -> Option<Path> {
     }
     // Prior and volume of the parameters, from the fit to the same classes.
     let occam = fit.ln_evidence - fit.ln_like;
-    // The path that nobody follows: every position scattered about it.
-    let stray: Vec<Obs> = points
-        .iter()
-        .map(|o| Obs {
-            t_yr: o.t_yr,
-            x_mas: o.x_mas,
-            y_mas: o.y_mas,
-            cov: o.cov + Cov2::round((STRAY_FWHM * o.fwhm_mas).powi(2)),
-        })
-        .collect();
-    let none = state_fit::fit(dynamics, &stray, fit.t0_yr, &fit.p, 15)?;
-    for (nats, (o, s)) in nats.iter_mut().zip(points.iter().zip(&stray)) {
+    let none = astray(dynamics, points, fit.t0_yr, &fit.p)?;
+    for (nats, o) in nats.iter_mut().zip(points) {
         let (x, y) = dynamics.position(&none.p, none.t0_yr, o.t_yr);
         let (dx, dy) = (o.x_mas - x, o.y_mas - y);
-        *nats -= state_fit::core_wing(s.cov.chi2(dx, dy), s.cov.det().ln()).0;
+        let cov = stray_cov(o);
+        *nats -= state_fit::core_wing(cov.chi2(dx, dy), cov.det().ln()).0;
     }
     let ln_odds = sum + occam - none.ln_evidence;
     ln_odds.is_finite().then_some(Path {

@@ -19,7 +19,7 @@ const HOST_FWHM: f64 = 4.5;
 /// A blend lies within so many fwhm of its known star, and a false detection is not brighter
 /// than the depth of its list by so much.
 const BLEND_FWHM: f64 = 0.8;
-const BRIGHT_MAG: f64 = 2.0;
+const BRIGHT_MAG: f64 = 2.5;
 /// An artefact keeps its offset from the host within so many fwhm, per axis.
 const KEEPS_FWHM: f64 = 0.35;
 
@@ -63,7 +63,7 @@ pub struct Rivals {
     pub single: f64,
     pub blend: f64,
     pub free: f64,
-    /// The known star that gives light to most of them, and to what share.
+    /// The known star that makes most of them alone, and what share.
     pub main: Option<(u32, f64)>,
     /// The bright star near most of the unexplained ones, with how well they keep to it
     /// \[fwhm per axis\].
@@ -192,6 +192,10 @@ fn summary(case: &Case, places: Vec<Without>) -> Rivals {
     let share =
         |test: &dyn Fn(&Without) -> bool| listed.iter().filter(|w| test(w)).count() as f64 / n;
     let stars = most_often(listed.iter().flat_map(|w| w.holders.iter().copied()));
+    let alone = most_often(listed.iter().filter_map(|w| match *w.holders {
+        [k] => Some(k),
+        _ => None,
+    }));
     let hosts = most_often(
         listed
             .iter()
@@ -210,7 +214,7 @@ fn summary(case: &Case, places: Vec<Without>) -> Rivals {
         single: share(&|w| w.holders.len() == 1),
         blend: share(&|w| w.holders.len() > 1 || w.is_unknown_blend()),
         free: share(&|w| w.holders.is_empty() && !w.is_unknown_blend()),
-        main: stars.first().map(|&(k, count)| (k, count as f64 / n)),
+        main: alone.first().map(|&(k, count)| (k, count as f64 / n)),
         host,
         stars: stars.into_iter().map(|s| s.0).collect(),
         places,

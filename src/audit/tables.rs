@@ -3,7 +3,7 @@
 use super::evidence::{Row, Settling};
 use super::judge::Judged;
 use super::path::Part;
-use super::verdict::Verdict;
+use super::verdict::{Verdict, would_stand};
 use crate::io::table::Precision::{Decimals, Full};
 use crate::io::table::Table;
 use crate::model::campaign::Campaign;
@@ -81,6 +81,25 @@ pub fn verdicts<'a>(judged: &'a [Judged], names: Names<'a>) -> Table<'a> {
             "share of scrambled campaigns with as good a star",
             Decimals(5),
             |k| j[k].chance_p,
+        )
+        .float(
+            "chance_best_nats",
+            "",
+            "path_nats of the best path in any scrambled campaign",
+            Decimals(3),
+            |k| {
+                (j[k].scrambled.iter().copied())
+                    .fold(f64::NEG_INFINITY, f64::max)
+                    .max(-999.0)
+            },
+        )
+        .int(
+            "chance_stands",
+            "scrambled campaigns in which the path would have stood by its odds",
+            |k| {
+                let stand = |s: &&f64| would_stand(**s);
+                Some(j[k].scrambled.iter().filter(stand).count() as i64)
+            },
         )
         .float(
             "chance_expected",

@@ -10,8 +10,8 @@ const STANDS_NATS: f64 = 3.0;
 const FALLS_NATS: f64 = 3.0;
 /// Chance rate below which a claim may stand.
 const STANDS_P: f64 = 0.01;
-/// ln odds of a claim for which no star at all was found \[nats\].
-const NO_STAR_NATS: f64 = -12.0;
+/// ln odds of a claim too short for any path \[nats\].
+const NO_PATH_NATS: f64 = 0.0;
 /// Beyond this, odds only say that the models are too simple \[nats\].
 const MOST_NATS: f64 = 30.0;
 /// Nats are divided by this before they become odds: models are never quite right.
@@ -23,7 +23,7 @@ const ROBBED_NATS: f64 = -1.5;
 /// Shares of a claim's detections that name the winning rival.
 const MOSTLY_FREE: f64 = 0.6;
 const MOSTLY_ONE: f64 = 0.6;
-const MOSTLY_BLENDS: f64 = 0.7;
+const MOSTLY_BLENDS: f64 = 0.74;
 
 /// What is thought of a claim.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, PartialOrd, Ord)]
@@ -100,8 +100,8 @@ impl Odds {
     pub fn of(candidate: Option<&Candidate>, rivals: &Rivals) -> Self {
         let Some(c) = candidate else {
             return Self {
-                ln_odds: NO_STAR_NATS,
-                path: NO_STAR_NATS,
+                ln_odds: NO_PATH_NATS,
+                path: NO_PATH_NATS,
                 silent: 0.0,
                 robbed: 0.0,
             };
@@ -127,6 +127,12 @@ impl Odds {
     pub fn p_real(self) -> f64 {
         logistic(self.ln_odds)
     }
+}
+
+/// Would a path of so many nats stand by its odds, were it a claim?
+#[must_use]
+pub fn would_stand(path_nats: f64) -> bool {
+    path_nats / TEMPERATURE > STANDS_NATS
 }
 
 /// The verdict on odds, chance and the rivals.

@@ -479,7 +479,7 @@ mod tests {
             "field.toml",
             "[field]\nname = \"Lantern core\"\nreference_epoch = 2000.0\n\
              [stars]\nspeed_mas_yr = 6.0\n[instrument.a]\nfwhm_mas = 50.0\n\
-             default_err_mas = 1.0\n\
+             default_err_mas = 1.0\ndefault_mag_err = 0.1\n\
              [[epoch]]\nname = \"spring\"\ntime = 2000.2\nfile = \"a.csv\"\ninstrument = \"a\"\n\
              [[epoch]]\nname = \"autumn\"\ntime = 2000.8\nfile = \"b.csv\"\ninstrument = \"a\"\n",
         );

@@ -1,2 +1,3 @@
 //! Made-up campaigns against what theory says of them.
 mod confusion;
+mod recover;
