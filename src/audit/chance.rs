@@ -87,7 +87,7 @@ fn turned(
         let middle = middle(scene, s);
         let mut best: Option<(f64, Point)> = None;
         for d in 0..s.len() {
-            if !is_free(&desk.groups[d], own) {
+            if !is_free(desk.holders.of(d), own) {
                 continue;
             }
             let (x, y) = (s.data.x_mas[d], s.data.y_mas[d]);

@@ -120,7 +120,7 @@ fn expected_by_chance(scene: &Scene, work: &Work, case: &Case, c: Option<&Candid
         n_epochs += 1;
         for d in 0..s.len() {
             let r = (s.data.x_mas[d] - cx).hypot(s.data.y_mas[d] - cy);
-            if r < radius && chance::is_free(&work.desks[e].groups[d], c.own) {
+            if r < radius && chance::is_free(work.desks[e].holders.of(d), c.own) {
                 free += 1.0;
             }
         }

@@ -18,7 +18,7 @@ const HOST_MAG: f64 = 2.0;
 const HOST_FWHM: f64 = 4.5;
 /// A blend lies within so many fwhm of its known star, and a false detection is not brighter
 /// than the depth of its list by so much.
-const BLEND_FWHM: f64 = 0.8;
+const BLEND_FWHM: f64 = 0.7;
 const BRIGHT_MAG: f64 = 2.5;
 /// An artefact keeps its offset from the host within so many fwhm, per axis.
 const KEEPS_FWHM: f64 = 0.35;

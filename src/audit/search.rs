@@ -98,6 +98,7 @@ pub fn best(scene: &Scene, work: &Work, case: &Case) -> Option<Candidate> {
         mag_var: path.mag_var,
         cells: vec![Cell::Missed; scene.sights.len()],
         worth: path.ln_odds,
+        blends: Vec::new(),
     };
     for (&k, n) in used.iter().zip(0..) {
         if let (Some(e), Some(d)) = (case.places[k].epoch, case.places[k].row) {
@@ -162,7 +163,7 @@ fn holders(work: &Work, case: &Case) -> Vec<u32> {
     let n = case.detections().count() as f64;
     let held = case
         .detections()
-        .flat_map(|(e, d)| work.desks[e].groups[d as usize].members().to_vec());
+        .flat_map(|(e, d)| work.desks[e].holders.of(d as usize).members().to_vec());
     super::rivals::most_often(held)
         .into_iter()
         .filter(|c| c.1 >= 2 && c.1 as f64 >= LEAST_SHARE * n)
@@ -183,7 +184,7 @@ fn found(scene: &Scene, work: &Work, star: &Star) -> Option<u32> {
         .collect();
     let held = own
         .iter()
-        .flat_map(|&(e, d)| work.desks[e].groups[d as usize].members().to_vec());
+        .flat_map(|&(e, d)| work.desks[e].holders.of(d as usize).members().to_vec());
     let (k, count) = *super::rivals::most_often(held).first()?;
     let near = own
         .iter()

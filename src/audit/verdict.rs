@@ -12,7 +12,9 @@ const FALLS_NATS: f64 = 3.0;
 const STANDS_P: f64 = 0.01;
 /// ln odds of a claim too short for any path \[nats\].
 const NO_PATH_NATS: f64 = 0.0;
-/// Beyond this, odds only say that the models are too simple \[nats\].
+/// Beyond so many nats odds grow only a third as fast, and end: what else can be wrong than was
+/// thought of weighs more than the numbers.
+const SOFT_NATS: f64 = 3.0;
 const MOST_NATS: f64 = 30.0;
 /// Nats are divided by this before they become odds: models are never quite right.
 const TEMPERATURE: f64 = 3.0;
@@ -21,7 +23,7 @@ const TEMPERATURE: f64 = 3.0;
 const ROBBED_GAIN: f64 = 4.0;
 const ROBBED_NATS: f64 = -1.5;
 /// Shares of a claim's detections that name the winning rival.
-const MOSTLY_FREE: f64 = 0.6;
+const MOSTLY_FREE: f64 = 0.5;
 const MOSTLY_ONE: f64 = 0.6;
 const MOSTLY_BLENDS: f64 = 0.74;
 
@@ -116,7 +118,7 @@ impl Odds {
             * ROBBED_NATS;
         let sum = c.path.ln_odds + c.silent_nats() + robbed;
         Self {
-            ln_odds: (sum / TEMPERATURE).clamp(-MOST_NATS, MOST_NATS),
+            ln_odds: tempered(sum / TEMPERATURE),
             path: c.path.ln_odds,
             silent: c.silent_nats(),
             robbed,
@@ -127,6 +129,13 @@ impl Odds {
     pub fn p_real(self) -> f64 {
         logistic(self.ln_odds)
     }
+}
+
+/// Large odds made modest.
+fn tempered(nats: f64) -> f64 {
+    let beyond = (nats.abs() - SOFT_NATS).max(0.0);
+    let size = nats.abs().min(SOFT_NATS) + beyond / 3.0;
+    size.min(MOST_NATS).copysign(nats)
 }
 
 /// Would a path of so many nats stand by its odds, were it a claim?
@@ -162,5 +171,28 @@ pub fn best_rival(r: &Rivals) -> Verdict {
         Verdict::Blend
     } else {
         Verdict::StrungTogether
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn large_odds_are_made_modest_in_order() {
+        assert_eq!(tempered(2.0), 2.0);
+        assert_eq!(tempered(-2.0), -2.0);
+        assert_eq!(tempered(9.0), 5.0);
+        assert_eq!(tempered(-9.0), -5.0);
+        assert_eq!(tempered(1e6), MOST_NATS);
+        assert!(tempered(3.1) > tempered(3.0));
+    }
+
+    #[test]
+    fn words_are_unique() {
+        let mut words: Vec<&str> = Verdict::ALL.iter().map(|v| v.word()).collect();
+        words.sort_unstable();
+        words.dedup();
+        assert_eq!(words.len(), Verdict::ALL.len());
     }
 }

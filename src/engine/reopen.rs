@@ -136,6 +136,7 @@ fn star(scene: &Scene, track: &Track, cells: Vec<Cell>) -> Option<Star> {
         mag_var: 0.05,
         cells,
         worth: 0.0,
+        blends: Vec::new(),
     };
     if let Some((mag, var, _)) = work::magnitude(scene, &star.cells, |_| 1.0) {
         (star.mag, star.mag_var) = (mag, var);
