@@ -8,14 +8,16 @@ use super::seeds::Seeds;
 use super::settings::Settings;
 use super::{orbits, prepare, rounds};
 use crate::maths::lnprob::logistic;
+use crate::maths::order;
 use crate::model::campaign::Campaign;
 use crate::model::detection::FieldEpoch;
 use crate::model::result::Solution;
+use crate::motion::wander::{Course, Wander};
 use crate::resolve::belief::{self, Beliefs};
 use crate::resolve::grow;
 use crate::resolve::joint::{self, Choices};
 use crate::resolve::scene::Scene;
-use crate::resolve::work::Work;
+use crate::resolve::work::{self, Work};
 use crate::track::assemble::{self, Parts};
 use crate::track::proof::{self, Proved, Tangle};
 
@@ -117,6 +119,8 @@ fn conclude(
             .collect::<Vec<Tangle>>(),
     };
     observer.stage("tables", None);
+    let courses = courses(scene, &work);
+    let wander = Wander::estimate(&scene.dynamics, &courses, crossing_yr(scene, &courses));
     assemble::assemble(&Parts {
         campaign,
         epochs,
@@ -125,7 +129,37 @@ fn conclude(
         beliefs: &beliefs,
         real: &real,
         proved: &proved,
+        wander: &wander,
     })
+}
+
+/// Courses of stars that are alone more often than not: they tell how errors persist.
+fn courses(scene: &Scene, work: &Work) -> Vec<Course> {
+    (work.stars.iter().enumerate())
+        .filter_map(|(k, star)| {
+            let mut obs = Vec::new();
+            let press = |e: usize| work.desks[e].preds[k].press;
+            work::clean_obs(scene, &star.cells, press, &mut obs);
+            (obs.len() >= star.blends.len()).then_some(Course {
+                fit: star.fit,
+                obs,
+                mag: star.mag,
+            })
+        })
+        .collect()
+}
+
+/// Time in which a faint neighbour crosses the profile of a star, typical of the campaign.
+fn crossing_yr(scene: &Scene, courses: &[Course]) -> f64 {
+    let mut fwhm: Vec<f64> = scene.sights.iter().map(|s| s.sensor.fwhm_mas).collect();
+    let mut speed: Vec<f64> = (courses.iter())
+        .filter_map(|c| c.obs.first())
+        .map(|o| scene.dynamics.speed_mas_yr(o.x_mas, o.y_mas, o.t_yr))
+        .collect();
+    match (order::median(&mut fwhm), order::median(&mut speed)) {
+        (Some(f), Some(v)) if v > 0.0 => f / (std::f64::consts::SQRT_2 * v),
+        _ => 1.0,
+    }
 }
 
 /// Gains are divided by this before beliefs are formed: models are never quite right.

@@ -13,3 +13,4 @@ pub mod state;
 pub mod state_fit;
 pub mod terms;
 pub mod three_points;
+pub mod wander;

@@ -7,6 +7,7 @@ use crate::model::motion::MotionKind;
 use crate::model::result::{
     EpochReport, Leftover, Membership, Rival, Solution, TangleReport, Track,
 };
+use crate::motion::wander::Wander;
 use crate::resolve::belief::Beliefs;
 use crate::resolve::scene::Scene;
 use crate::resolve::star::Cell;
@@ -57,6 +58,8 @@ pub struct Parts<'a> {
     /// Probability that each star is one real star.
     pub real: &'a [f64],
     pub proved: &'a Proved,
+    /// Errors that persist.
+    pub wander: &'a Wander,
 }
 
 struct Member {
@@ -230,7 +233,13 @@ fn track(parts: &Parts, i: usize, k: usize, members: &[Member]) -> Track {
         &mut obs,
     );
     let t_ref = campaign.reference.yr();
-    let sum = summary::summarise(&scene.dynamics, &star.fit, &obs, t_ref);
+    let clean = obs.len();
+    obs.extend(star.blends.iter().map(|b| b.1));
+    let fit = (parts.wander).restate(&scene.dynamics, &star.fit, &obs, star.mag);
+    obs.truncate(clean);
+    let sum = summary::summarise(&scene.dynamics, &fit, &obs, t_ref, |line, f| {
+        parts.wander.restate(line, f, &obs, star.mag)
+    });
     let times: Vec<f64> = members.iter().map(|m| scene.sights[m.epoch].t_yr).collect();
     let first = times.iter().copied().fold(f64::INFINITY, f64::min);
     let last = times.iter().copied().fold(f64::NEG_INFINITY, f64::max);
@@ -246,7 +255,7 @@ fn track(parts: &Parts, i: usize, k: usize, members: &[Member]) -> Track {
     } else {
         0.5 * (first + last)
     };
-    let at = summary::at_mean(&scene.dynamics, &star.fit, mean);
+    let at = summary::at_mean(&scene.dynamics, &fit, mean);
     let mags: Vec<f64> = star
         .cells
         .iter()

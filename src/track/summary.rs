@@ -24,9 +24,16 @@ pub struct Summary {
 }
 
 /// Summarise a fit at `t_ref`. Where curvature is not significant the straight line through
-/// the same detections is given: that is what the data say.
+/// the same detections is given: that is what the data say. `restate` gives that line the
+/// errors that the fit has already.
 #[must_use]
-pub fn summarise(dynamics: &Dynamics, fit: &Fit, obs: &[Obs], t_ref: f64) -> Summary {
+pub fn summarise(
+    dynamics: &Dynamics,
+    fit: &Fit,
+    obs: &[Obs],
+    t_ref: f64,
+    restate: impl Fn(&Dynamics, &Fit) -> Fit,
+) -> Summary {
     let full = match *dynamics {
         Dynamics::Central { gm_mas3_yr2, .. } => central(dynamics, gm_mas3_yr2, fit, t_ref),
         Dynamics::Free { .. } => free(fit, t_ref),
@@ -85,7 +92,7 @@ pub fn summarise(dynamics: &Dynamics, fit: &Fit, obs: &[Obs], t_ref: f64) -> Sum
     };
     match straight {
         Some(f) => {
-            let mut s = free(&f, t_ref);
+            let mut s = free(&restate(&line, &f), t_ref);
             s.motion.kind = MotionKind::Linear;
             for k in 4..6 {
                 s.motion.p[k] = 0.0;
