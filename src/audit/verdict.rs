@@ -18,6 +18,9 @@ const SOFT_NATS: f64 = 3.0;
 const MOST_NATS: f64 = 30.0;
 /// Nats are divided by this before they become odds: models are never quite right.
 const TEMPERATURE: f64 = 3.0;
+/// Share of a claim's positions on the path of its star, and of any other star it touches.
+const RIGHT_OF_REAL: f64 = 0.9;
+const RIGHT_OF_OTHER: f64 = 0.35;
 /// A known star that explains a detection this well \[nats\] is robbed when the claim takes it, at
 /// the cost of being missed there.
 const ROBBED_GAIN: f64 = 4.0;
@@ -116,7 +119,16 @@ impl Odds {
             })
             .count() as f64
             * ROBBED_NATS;
-        let sum = c.path.ln_odds + c.silent_nats() + robbed;
+        let mut sum = c.path.ln_odds + c.silent_nats() + robbed;
+        // A path that misses a good part of the claim may be a star's, but not the claimed one's,
+        // however much better it is than no path at all.
+        let strangers = c.path.count(Part::Stranger) as f64;
+        let held = c.used.len() as f64 - strangers;
+        let same = held * (RIGHT_OF_REAL / RIGHT_OF_OTHER).ln()
+            + strangers * ((1.0 - RIGHT_OF_REAL) / (1.0 - RIGHT_OF_OTHER)).ln();
+        if same < 0.0 {
+            sum = sum.min(TEMPERATURE * same);
+        }
         Self {
             ln_odds: tempered(sum / TEMPERATURE),
             path: c.path.ln_odds,

@@ -111,8 +111,21 @@ fn claims_are_judged_and_bad_ones_refused() {
     }
     claims.push_str("early,99,,0,0\nearly,1,,0,0\nlone,0,,0,0\n");
     fs::write(folder.join("claims.csv"), claims).expect("claims");
-    let args = ["audit", "run", "--claims", "claims.csv", "--out", "audit"];
-    let (code, said) = program(folder, &args);
+    let audit = |out: &str, scrambles: &str, more: &[&str]| {
+        let args = [
+            "audit",
+            "run",
+            "--claims",
+            "claims.csv",
+            "--out",
+            out,
+            "--scrambles",
+            scrambles,
+        ];
+        program(folder, &[&args[..], more].concat())
+    };
+    // A hundred scrambles are the least that let a claim stand.
+    let (code, said) = audit("audit", "100", &[]);
     assert_eq!(code, 1, "two claims are refused: {said}");
     let line = 2 + 2 * EPOCHS;
     assert!(
@@ -130,14 +143,14 @@ fn claims_are_judged_and_bad_ones_refused() {
     }
 
     // The same bytes with another number of threads; an existing result is not replaced unasked.
-    let before = fs::read(folder.join("audit/verdicts.ecsv")).expect("verdicts");
-    assert_eq!(program(folder, &args).0, 1);
-    let again = [&args[..], &["--replace", "--threads", "1"]].concat();
-    program(folder, &again);
-    assert_eq!(
-        before,
-        fs::read(folder.join("audit/verdicts.ecsv")).expect("verdicts")
-    );
+    let few = |more: &[&str]| {
+        let (code, said) = audit("few", "3", more);
+        assert_eq!(code, 1, "{said}");
+        fs::read(folder.join("few/verdicts.ecsv")).expect("verdicts")
+    };
+    let before = few(&["--threads", "1"]);
+    assert_eq!(before, few(&["--replace", "--threads", "3"]));
+    assert!(audit("few", "3", &[]).1.contains("few"));
 }
 
 #[test]
@@ -161,7 +174,16 @@ fn a_claimed_orbit_and_a_track_are_the_star_they_describe() {
         s.eccentricity, s.inclination_deg, s.node_deg, s.arg_pericentre_deg, s.t_pericentre_yr
     );
     fs::write(folder.join("claims.csv"), claims).expect("claims");
-    let args = ["audit", "run", "--claims", "claims.csv", "--out", "audit"];
+    let args = [
+        "audit",
+        "run",
+        "--claims",
+        "claims.csv",
+        "--out",
+        "audit",
+        "--scrambles",
+        "100",
+    ];
     let (code, said) = program(folder, &args);
     assert_eq!(code, 1, "an open orbit is refused: {said}");
     assert!(
