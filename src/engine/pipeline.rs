@@ -119,6 +119,7 @@ fn conclude(
             .collect::<Vec<Tangle>>(),
     };
     observer.stage("tables", None);
+    rounds::refit(scene, &mut work);
     let courses = courses(scene, &work);
     let wander = Wander::estimate(&scene.dynamics, &courses, crossing_yr(scene, &courses));
     assemble::assemble(&Parts {

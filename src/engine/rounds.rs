@@ -20,8 +20,8 @@ pub const BIRTH_NATS: f64 = 0.0;
 /// Evidence below which a track dies \[nats\].
 pub const DEATH_NATS: f64 = 0.0;
 
-/// Refit all stars to their clean detections and predict every epoch afresh.
-pub fn refresh(scene: &Scene, work: &mut Work) {
+/// Refit all stars to what they hold.
+pub fn refit(scene: &Scene, work: &mut Work) {
     let desks = &work.desks;
     work.stars.par_iter_mut().enumerate().for_each(|(k, star)| {
         grow::recentre(scene, star);
@@ -35,6 +35,11 @@ pub fn refresh(scene: &Scene, work: &mut Work) {
             15,
         );
     });
+}
+
+/// Refit all stars and predict every epoch afresh.
+pub fn refresh(scene: &Scene, work: &mut Work) {
+    refit(scene, work);
     let stars = &work.stars;
     let new: Vec<Desk> = (0..scene.sights.len())
         .into_par_iter()
@@ -370,10 +375,10 @@ pub fn run(scene: &mut Scene, seeds: &Seeds, observer: &dyn Observer) -> Work {
         births(scene, seeds, &mut work, &mut tried);
         revolving::births(scene, &mut work);
     }
-    for _ in 0..2 {
+    // Ends with an assignment: what is listed is the best that the predictions allow.
+    for _ in 0..3 {
         refresh(scene, &mut work);
         assign(scene, &mut work);
     }
-    refresh(scene, &mut work);
     work
 }

@@ -7,8 +7,8 @@
 //! white errors scaled by a factor. Both are found per class of magnitude by the marginal
 //! likelihood of the residuals of well-observed stars, the motion integrated out (restricted
 //! maximum likelihood, Patterson & Thompson 1971; from memory) on a grid of a few values; tau is
-//! of the order of the time in which an unseen neighbour crosses the profile, fwhm / (sqrt(2) x
-//! velocity dispersion), since a campaign hardly tells tau from s. A campaign with too few such stars
+//! set from the time in which an unseen neighbour crosses the profile, fwhm / (sqrt(2) x velocity
+//! dispersion), since a campaign hardly tells tau from s. A campaign with too few such stars
 //! keeps its white errors, and what persists for longer than the campaign cannot be seen at all.
 
 use nalgebra::{DMatrix, DVector, Dyn};
@@ -22,13 +22,14 @@ const FEWEST_OBS: usize = 7;
 const FEWEST_STARS: usize = 12;
 const MOST_STARS: usize = 300;
 /// Work per class: sum of the cubes of the numbers of positions.
-const WORK: usize = 2_500_000;
+const WORK: usize = 5_000_000;
 /// Classes of magnitude.
 const CLASSES: usize = 3;
 /// Sizes that are tried, in median believed errors of the class.
 const SIZES: [f64; 9] = [0.0, 0.25, 0.4, 0.6, 0.9, 1.3, 1.9, 2.8, 4.0];
-/// Times for which offsets persist that are tried, in crossings of the profile.
-const CROSSINGS: [f64; 3] = [1.0, 2.0, 4.0];
+/// Time for which offsets persist, in crossings of the profile: a neighbour pulls one way until
+/// it is at the centre and the other way until it has left.
+const CROSSINGS: f64 = 2.0;
 /// Factors on the white errors that are tried.
 const WHITES: [f64; 6] = [0.4, 0.6, 0.8, 1.0, 1.25, 1.6];
 
@@ -86,27 +87,18 @@ impl Wander {
                     .collect()
             })
             .collect();
-        let mut best: Option<(f64, Self)> = None;
-        for tau_yr in CROSSINGS.map(|c| c * crossing_yr) {
-            let mut total = 0.0;
-            let mut law = Self {
-                tau_yr,
-                classes: Vec::new(),
-            };
-            for (class, axes) in classes.iter().zip(&axes) {
-                let (ln, white, sigma_mas) = best_of_class(axes, tau_yr);
-                total += ln;
-                law.classes.push(Class {
+        let tau_yr = CROSSINGS * crossing_yr;
+        let classes = (classes.iter().zip(&axes))
+            .map(|(class, axes)| {
+                let (white, sigma_mas) = best_of_class(axes, tau_yr);
+                Class {
                     to_mag: class.last().map_or(f64::INFINITY, |c| c.mag),
                     white,
                     sigma_mas,
-                });
-            }
-            if best.as_ref().is_none_or(|b| total > b.0) {
-                best = Some((total, law));
-            }
-        }
-        best.map(|b| b.1).unwrap_or_default()
+                }
+            })
+            .collect();
+        Self { tau_yr, classes }
     }
 
     fn class(&self, mag: f64) -> Option<&Class> {
@@ -202,8 +194,8 @@ fn axes(dynamics: &Dynamics, c: &Course) -> [Axis; 2] {
     })
 }
 
-/// Most likely (ln likelihood, white factor, size) of a class.
-fn best_of_class(axes: &[Axis], tau_yr: f64) -> (f64, f64, f64) {
+/// Most likely (white factor, size) of a class.
+fn best_of_class(axes: &[Axis], tau_yr: f64) -> (f64, f64) {
     let mut errors: Vec<f64> = axes
         .iter()
         .flat_map(|a| a.variance.iter().map(|v| v.sqrt()))
@@ -224,7 +216,7 @@ fn best_of_class(axes: &[Axis], tau_yr: f64) -> (f64, f64, f64) {
             }
         }
     }
-    best
+    (best.1, best.2)
 }
 
 /// ln likelihood of an axis' residuals with the motion integrated out (up to a constant).
@@ -316,7 +308,7 @@ mod tests {
     #[test]
     fn offsets_that_persist_widen_the_stated_errors() {
         let courses = field(2.0);
-        let law = Wander::estimate(&DYNAMICS, &courses, 5.0);
+        let law = Wander::estimate(&DYNAMICS, &courses, 2.5);
         for c in &law.classes {
             assert!((1.2..=3.2).contains(&c.sigma_mas), "{law:?}");
         }
@@ -332,7 +324,7 @@ mod tests {
     #[test]
     fn white_errors_stay_white() {
         let courses = field(0.0);
-        let law = Wander::estimate(&DYNAMICS, &courses, 5.0);
+        let law = Wander::estimate(&DYNAMICS, &courses, 2.5);
         let share = within_one_sigma(&courses, &law);
         assert!((0.58..0.80).contains(&share), "{share} {law:?}");
     }
