@@ -201,6 +201,11 @@ fn next_batch(
     batch
 }
 
+/// Partners from which a growth is tried; more where each epoch is one of few.
+const PARTNERS: usize = 4;
+const PARTNERS_SHORT: usize = 8;
+const SHORT_CAMPAIGN: usize = 12;
+
 /// Best growth from an anchor over several partner detections.
 fn propose(
     scene: &Scene,
@@ -214,7 +219,12 @@ fn propose(
     if best.as_ref().is_some_and(|b| b.worth > 60.0) {
         return best;
     }
-    for seed in seeds.partners(scene, work, (e, d), 4) {
+    let most = if scene.sights.len() <= SHORT_CAMPAIGN {
+        PARTNERS_SHORT
+    } else {
+        PARTNERS
+    };
+    for seed in seeds.partners(scene, work, (e, d), most) {
         if let Some(g) = grow::grow(scene, work, &[(e, d), seed], -12.0, None, sc)
             && best.as_ref().is_none_or(|b| g.worth > b.worth)
         {
