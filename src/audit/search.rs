@@ -99,6 +99,7 @@ pub fn best(scene: &Scene, work: &Work, case: &Case) -> Option<Candidate> {
         cells: vec![Cell::Missed; scene.sights.len()],
         worth: path.ln_odds,
         blends: Vec::new(),
+        ln_extra: 0.0,
     };
     for (&k, n) in used.iter().zip(0..) {
         if let (Some(e), Some(d)) = (case.places[k].epoch, case.places[k].row) {

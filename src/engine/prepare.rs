@@ -74,6 +74,7 @@ pub fn scene<'a>(campaign: &Campaign, epochs: &'a [FieldEpoch]) -> Scene<'a> {
                 mag: Vec::new(),
                 mag_var: Vec::new(),
                 ln_false: Vec::new(),
+                ln_single: Vec::new(),
                 ln_star: Vec::new(),
             };
             s.ln_star = densities(&s, area);
@@ -101,7 +102,15 @@ pub fn apply_laws(s: &mut Sight) {
         .map(|&e| sn.errors.magnitude_var(e))
         .collect();
     let ln_share = sn.falses.share.ln();
-    s.ln_false = s.ln_star.iter().map(|l| l + ln_share).collect();
+    s.ln_false = if s.ln_single.is_empty() {
+        s.ln_star.iter().map(|l| l + ln_share).collect()
+    } else {
+        s.ln_star
+            .iter()
+            .zip(&s.ln_single)
+            .map(|(l, single)| l + single)
+            .collect()
+    };
 }
 
 /// Area of the box that holds every detection of every epoch \[mas^2\]: a list of one star says

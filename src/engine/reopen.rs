@@ -137,6 +137,7 @@ fn star(scene: &Scene, track: &Track, cells: Vec<Cell>) -> Option<Star> {
         cells,
         worth: 0.0,
         blends: Vec::new(),
+        ln_extra: 0.0,
     };
     if let Some((mag, var, _)) = work::magnitude(scene, &star.cells, |_| 1.0) {
         (star.mag, star.mag_var) = (mag, var);

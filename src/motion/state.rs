@@ -158,6 +158,22 @@ impl Dynamics {
         }
     }
 
+    /// ln of the prior density of a velocity on the sky \[(mas/yr)^-2\]; `None` near a mass, where
+    /// it depends on the place.
+    #[must_use]
+    pub fn ln_velocity(&self, vx: f64, vy: f64) -> Option<f64> {
+        match *self {
+            Self::Central { .. } => None,
+            Self::Free {
+                speed_mas_yr, wide, ..
+            } => {
+                let v2 = vx * vx + vy * vy;
+                let (core, far) = velocity_parts(speed_mas_yr, wide, v2);
+                Some(crate::maths::lnprob::ln_add(core, far))
+            }
+        }
+    }
+
     /// Largest plausible sky speed at a projected radius \[mas/yr\].
     #[must_use]
     pub fn top_speed_mas_yr(&self, x_mas: f64, y_mas: f64, t: f64) -> f64 {
@@ -187,15 +203,22 @@ impl Dynamics {
     }
 }
 
+/// ln density of the Gaussian core and of the tail of [`Wide`] at a squared speed.
+fn velocity_parts(speed: f64, wide: Wide, v2: f64) -> (f64, f64) {
+    let core = (1.0 - wide.fraction).ln()
+        - (2.0 * std::f64::consts::PI).ln()
+        - 2.0 * speed.ln()
+        - 0.5 * v2 / (speed * speed);
+    (core, wide.fraction.ln() + wide.ln_density(v2))
+}
+
 /// Velocity: a Gaussian core and the tail of [`Wide`]. Acceleration: a Gaussian. The curvature is
 /// that of the component mix at hand, which keeps Newton steps safe.
 fn free_prior(speed: f64, accel: f64, wide: Wide, p: &P6) -> Prior {
     let v2 = p[2] * p[2] + p[3] * p[3];
     let two_pi = 2.0 * std::f64::consts::PI;
     let s2 = wide.speed_mas_yr * wide.speed_mas_yr;
-    let core =
-        (1.0 - wide.fraction).ln() - two_pi.ln() - 2.0 * speed.ln() - 0.5 * v2 / (speed * speed);
-    let far = wide.fraction.ln() + wide.ln_density(v2);
+    let (core, far) = velocity_parts(speed, wide, v2);
     let total = crate::maths::lnprob::ln_add(core, far);
     let w = (core - total).exp();
     let iv = w / (speed * speed) + (1.0 - w) * 2.0 / (s2 + v2);

@@ -247,6 +247,7 @@ fn grow_along(
         mag_var: s0.mag_var[d0 as usize],
         cells: vec![Cell::Out; n_epoch],
         blends: Vec::new(),
+        ln_extra: 0.0,
         worth: 0.0,
     };
     let mut visited = vec![false; n_epoch];
@@ -450,7 +451,7 @@ const HIDDEN_NATS: f64 = -0.35;
 #[must_use]
 pub fn worth(scene: &Scene, work: &Work, star: &Star, own: Option<u32>) -> Worth {
     let mut parts = [0.0; 6];
-    let mut total = star.fit.ln_evidence;
+    let mut total = star.fit.ln_evidence + star.ln_extra;
     let mut ln_star = 0.0;
     let mut n = 0.0;
     for (e, cell) in star.cells.iter().enumerate() {

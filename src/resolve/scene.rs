@@ -19,6 +19,9 @@ pub struct Sight<'a> {
     /// ln of the density of false detections at each detection's place and magnitude
     /// \[per mas^2 per mag\] (per mas^2 where the magnitude is missing).
     pub ln_false: Vec<f64>,
+    /// ln of the share of detections that stay single around each one's magnitude, where it is
+    /// known better than by the law of false detections; empty where it is not.
+    pub ln_single: Vec<f64>,
     /// ln of the density of real stars at each detection's place and magnitude, same units.
     pub ln_star: Vec<f64>,
 }

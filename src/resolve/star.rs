@@ -39,6 +39,8 @@ pub struct Star {
     pub cells: Vec<Cell>,
     /// Places worked out from blends that took part in the fit: (epoch, place), by epoch.
     pub blends: Vec<(u32, Obs)>,
+    /// Evidence that the general cost does not hold \[nats\]: of pairs in a short campaign.
+    pub ln_extra: f64,
     /// Evidence with everything else fixed \[nats\], from the last revision.
     pub worth: f64,
 }

@@ -1,6 +1,7 @@
 //! Whole campaigns through the engine, against what is known of them.
 
 mod planets;
+mod sky;
 
 use std::collections::BTreeMap;
 use std::path::{Path, PathBuf};
@@ -14,9 +15,12 @@ fn fixture(name: &str) -> PathBuf {
         .join(name)
 }
 
-/// A linked campaign, and the ids of each track's members by epoch.
+/// A linked campaign with the ids of its detections.
 struct Field {
     linked: Linked,
+    /// By epoch and row.
+    ids: Vec<Vec<String>>,
+    /// Each track's members by epoch.
     members: Vec<BTreeMap<usize, String>>,
 }
 
@@ -25,12 +29,19 @@ fn link(folder: &Path) -> Field {
         read_campaign(&folder.join("campaign.toml")).unwrap_or_else(|f| panic!("{f}"));
     let (lists, _) = read_lists(&campaign).unwrap_or_else(|f| panic!("{f}"));
     let linked = link_lists(&campaign, &lists, &Settings::default(), &Silent).unwrap();
+    let ids: Vec<Vec<String>> = lists
+        .iter()
+        .map(|l| (0..l.len()).map(|k| l.ids.text(k).to_string()).collect())
+        .collect();
     let mut members = vec![BTreeMap::new(); linked.solution.tracks.len()];
     for m in &linked.solution.members {
-        let id = lists[m.epoch].ids.text(m.row).to_string();
-        members[m.track].insert(m.epoch, id);
+        members[m.track].insert(m.epoch, ids[m.epoch][m.row].clone());
     }
-    Field { linked, members }
+    Field {
+        linked,
+        ids,
+        members,
+    }
 }
 
 /// Rows of a small table, without its header.
