@@ -291,7 +291,8 @@ fn members(input: &ReportInput, selection: &Selection, quantum: f64, columns: &m
                 col[0].push(m.epoch as i32);
                 col[1].push(det as i32);
                 col[2].push(quantise(m.probability, 1e-4));
-                col[3].push(quantise(m.share, 1e-4));
+                // Two digits more than are shown, so that rounding twice does not show.
+                col[3].push(quantise(m.share, 1e-5));
                 col[4].push(quantise(m.dx_mas, quantum));
                 col[5].push(quantise(m.dy_mas, quantum));
                 col[6].push(m.flags.0 as i32);

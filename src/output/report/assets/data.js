@@ -76,7 +76,7 @@ function makeRun(header, c) {
     mag: (d) => (c.det_mag[d] === header.no_mag ? null : c.det_mag[d] / 1000),
     magErr: (d) => (c.det_mag_err[d] === header.no_mag ? null : c.det_mag_err[d] / 1000),
     prob: (m) => c.mem_prob[m] / 10000,
-    share: (m) => c.mem_share[m] / 10000,
+    share: (m) => c.mem_share[m] / 100000,
     dx: (m) => c.mem_dx[m] * quantum,
     dy: (m) => c.mem_dy[m] * quantum,
     memFlags: (m) => c.mem_flags[m],
