@@ -273,10 +273,7 @@ fn blend_law<'a>(told: impl Iterator<Item = &'a ((u32, u32), f64)>) -> Option<Bl
     let mut told: Vec<((u32, u32), f64)> = told.copied().collect();
     told.sort_by_key(|t| t.0);
     let sum: f64 = (told.chunk_by(|a, b| a.0 == b.0))
-        .map(|pair| {
-            let n = pair.len() as f64;
-            pair.iter().map(|t| t.1).sum::<f64>() * (PAIR_WEIGHT / n).min(1.0)
-        })
+        .map(|pair| pair.iter().map(|t| t.1).sum::<f64>() * weight_of_each(pair.len()))
         .sum();
     (sum.abs() > LAW_NATS).then_some(if sum > 0.0 {
         BlendLaw::Centroid
@@ -288,11 +285,16 @@ fn blend_law<'a>(told: impl Iterator<Item = &'a ((u32, u32), f64)>) -> Option<Bl
 /// Most weight that one pair of stars may have.
 const PAIR_WEIGHT: f64 = 4.0;
 
+/// Weight of each of the `n` events of one pair of stars.
+fn weight_of_each(n: usize) -> f64 {
+    (PAIR_WEIGHT / n as f64).min(1.0)
+}
+
 /// The events of an instrument, those of each pair sharing at most [`PAIR_WEIGHT`].
 fn weighted(mut events: Vec<((u32, u32), PairEvent)>) -> Vec<PairEvent> {
     events.sort_by_key(|e| e.0);
     for of_pair in events.chunk_by_mut(|a, b| a.0 == b.0) {
-        let weight = (PAIR_WEIGHT / of_pair.len() as f64).min(1.0);
+        let weight = weight_of_each(of_pair.len());
         for (_, e) in of_pair {
             e.weight = weight;
         }

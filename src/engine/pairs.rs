@@ -19,6 +19,7 @@
 use rayon::prelude::*;
 
 use super::prepare::apply_laws;
+use super::rounds::BIRTH_NATS;
 use super::seeds::Seeds;
 use crate::maths::assign::{Edges, Solver};
 use crate::maths::lnprob::ln_add;
@@ -33,8 +34,6 @@ use crate::resolve::work::{self, Work};
 /// Campaigns of so few epochs begin with an assignment of pairs.
 pub const FEW_EPOCHS: usize = 3;
 
-/// Least evidence of a pair in so short a campaign: more likely than not.
-const PAIR_NATS: f64 = 0.0;
 /// Evidence below which a pair is not even a part of a joint choice.
 const HOPELESS_NATS: f64 = -12.0;
 /// Evidence from which a pair may teach the difference of the magnitude scales.
@@ -158,7 +157,7 @@ fn choose(scene: &Scene, drafts: &[Vec<Pair>], second: usize) -> Vec<(usize, u32
     let mut starts = vec![0u32];
     let (mut to, mut cost) = (Vec::new(), Vec::new());
     for row in drafts {
-        for p in row.iter().filter(|p| p.worth() > PAIR_NATS) {
+        for p in row.iter().filter(|p| p.worth() > BIRTH_NATS) {
             to.push(p.row);
             cost.push(p.worth());
         }
@@ -308,7 +307,7 @@ fn raise_best(
         let (a, b) = (at(fit.t0_yr), at(fit.t0_yr + dt_yr));
         [(b.0 - a.0) / dt_yr, (b.1 - a.1) / dt_yr]
     };
-    let single = |row: &[Pair]| row.iter().map(Pair::worth).fold(PAIR_NATS, f64::max);
+    let single = |row: &[Pair]| row.iter().map(Pair::worth).fold(BIRTH_NATS, f64::max);
     let mut best = (
         single(&drafts[i]).max(single(&drafts[j])),
         None::<(usize, usize, f64)>,

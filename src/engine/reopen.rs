@@ -9,7 +9,7 @@ use crate::model::campaign::Campaign;
 use crate::model::detection::FieldEpoch;
 use crate::model::motion::MotionKind;
 use crate::model::result::{Solution, Track};
-use crate::motion::state::{Dynamics, P6};
+use crate::motion::state::P6;
 use crate::resolve::grow;
 use crate::resolve::scene::Scene;
 use crate::resolve::star::{Cell, Star};
@@ -97,14 +97,7 @@ fn star(scene: &Scene, track: &Track, cells: Vec<Cell>) -> Option<Star> {
     let motion = &track.motion;
     let t_ref = motion.t_ref_yr;
     let (cx, cy) = scene.dynamics.centre_at(t_ref);
-    let (ux, uy) = match scene.dynamics {
-        Dynamics::Central {
-            vx_mas_yr,
-            vy_mas_yr,
-            ..
-        } => (vx_mas_yr, vy_mas_yr),
-        Dynamics::Free { .. } => (0.0, 0.0),
-    };
+    let (ux, uy) = scene.dynamics.centre_velocity();
     let p = &motion.p;
     // Starts from the motion as tabulated, and from the place at the mean epoch.
     let mean = track.mean_epoch_yr;

@@ -40,6 +40,18 @@ pub enum Existing<'a> {
     },
 }
 
+impl<'a> Existing<'a> {
+    /// Refuse, unless replacing was asked for.
+    #[must_use]
+    pub fn asked(replace: bool, marker: &'a str) -> Self {
+        if replace {
+            Self::Replace { marker }
+        } else {
+            Self::Refuse
+        }
+    }
+}
+
 /// Makes the files of a directory; tests inject one that fails.
 pub trait FileMaker: Sync {
     /// # Errors

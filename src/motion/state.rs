@@ -97,6 +97,19 @@ impl Dynamics {
         }
     }
 
+    /// Motion of the mass on the sky \[mas/yr\]; (0, 0) without one.
+    #[must_use]
+    pub fn centre_velocity(&self) -> (f64, f64) {
+        match *self {
+            Self::Central {
+                vx_mas_yr,
+                vy_mas_yr,
+                ..
+            } => (vx_mas_yr, vy_mas_yr),
+            Self::Free { .. } => (0.0, 0.0),
+        }
+    }
+
     #[must_use]
     pub fn is_central(&self) -> bool {
         matches!(self, Self::Central { .. })

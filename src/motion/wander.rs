@@ -134,7 +134,7 @@ impl Wander {
                 h[(2 * i + 1, j)] = hi[(1, j)];
             }
             for (k, q) in obs.iter().enumerate() {
-                let c = class.sigma_mas.powi(2) * self.correlation(o.t_yr - q.t_yr);
+                let c = class.sigma_mas.powi(2) * correlation(o.t_yr - q.t_yr, self.tau_yr);
                 r[(2 * i, 2 * k)] += c;
                 r[(2 * i + 1, 2 * k + 1)] += c;
             }
@@ -156,10 +156,11 @@ impl Wander {
         }
         out
     }
+}
 
-    fn correlation(&self, dt_yr: f64) -> f64 {
-        (-dt_yr.abs() / self.tau_yr).exp()
-    }
+/// How much of an offset is left after a time.
+fn correlation(dt_yr: f64, tau_yr: f64) -> f64 {
+    (-dt_yr.abs() / tau_yr).exp()
 }
 
 /// One axis of one course.
@@ -223,7 +224,7 @@ fn best_of_class(axes: &[Axis], tau_yr: f64) -> (f64, f64) {
 fn ln_marginal(a: &Axis, tau_yr: f64, white: f64, sigma_mas: f64) -> f64 {
     let n = a.t_yr.len();
     let r = DMatrix::from_fn(n, n, |i, k| {
-        let c = sigma_mas * sigma_mas * (-(a.t_yr[i] - a.t_yr[k]).abs() / tau_yr).exp();
+        let c = sigma_mas * sigma_mas * correlation(a.t_yr[i] - a.t_yr[k], tau_yr);
         c + if i == k {
             white * white * a.variance[i]
         } else {

@@ -95,11 +95,9 @@ pub fn shared(s: &Sight, d: usize, preds: &[&Pred]) -> GroupFit {
         mag_var += w * w * p.mag_var;
         spread2 += w * ((p.x - b.x_mas).powi(2) + (p.y - b.y_mas).powi(2));
     }
-    // The blend's place and light are uncertain as far as it is a blend at all: a companion
-    // with a few per cent of the light leaves the measurement of the main star as good as it was.
-    let main = out.share[..n].iter().copied().fold(0.0, f64::max);
-    let mixed = (3.0 * (1.0 - main)).min(1.0);
-    let model = mixed * (sn.errors.blend_fwhm * sn.fwhm_mas + sn.spread_error() * spread2.sqrt());
+    // The blend's place and light are uncertain as far as it is a blend at all.
+    let mixed = blend::mixed(&out.share[..n]);
+    let model = sn.blend_error_mas(mixed, spread2);
     cov += Cov2::round(model * model);
     let chi2 = cov.chi2(e.x_mas[d] - b.x_mas, e.y_mas[d] - b.y_mas);
     if chi2 > GATE_CHI2 {

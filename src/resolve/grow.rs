@@ -18,7 +18,6 @@ use crate::motion::state_fit::{self, Fit, Obs, core_wing};
 pub struct Draft {
     pub star: Star,
     pub worth: f64,
-    pub n_alone: usize,
 }
 
 /// Buffers that a sequence of growths shares.
@@ -370,11 +369,7 @@ pub fn finish(
     let parts = worth(scene, work, &star, own);
     let worth = parts.hopeful(3.0);
     star.worth = parts.total();
-    Some(Draft {
-        star,
-        worth,
-        n_alone,
-    })
+    Some(Draft { star, worth })
 }
 
 /// Move the parameters' time to the middle of the clean detections.
@@ -450,7 +445,7 @@ const HIDDEN_NATS: f64 = -0.35;
 /// explained with it than without it.
 #[must_use]
 pub fn worth(scene: &Scene, work: &Work, star: &Star, own: Option<u32>) -> Worth {
-    let mut parts = [0.0; 6];
+    let (mut apart, mut shared, mut hidden) = (0.0, 0.0, 0.0);
     let mut total = star.fit.ln_evidence + star.ln_extra;
     let mut ln_star = 0.0;
     let mut n = 0.0;
@@ -462,12 +457,12 @@ pub fn worth(scene: &Scene, work: &Work, star: &Star, own: Option<u32>) -> Worth
             continue;
         }
         // Being apart from every neighbour: undone inside a group by the merge bonus.
-        parts[0] += p.ln_apart;
+        apart += p.ln_apart;
         total += p.ln_apart;
         total += p.ln_miss;
         if p.ln_apart < HIDDEN_NATS && matches!(cell, Cell::Missed) {
             // Not to be seen where a neighbour may hide it is a matter between the two.
-            parts[5] += p.ln_miss;
+            hidden += p.ln_miss;
         }
         match *cell {
             Cell::Alone(d) => {
@@ -494,14 +489,9 @@ pub fn worth(scene: &Scene, work: &Work, star: &Star, own: Option<u32>) -> Worth
                     ps[i] = &desk.preds[k as usize];
                 }
                 let without = cost::gain(s, d as usize, &ps[..m]).max(-30.0);
-                let with = if m == 0 {
-                    cost::alone(s, d as usize, &p)
-                } else {
-                    cost::shared(s, d as usize, &ps[..=m]).gain
-                };
-                let gain = with.max(-30.0) - without;
-                total += gain;
-                parts[3] += gain;
+                let with = cost::gain(s, d as usize, &ps[..=m]).max(-30.0);
+                total += with - without;
+                shared += with - without;
             }
             Cell::Missed | Cell::Out => {}
         }
@@ -511,9 +501,8 @@ pub fn worth(scene: &Scene, work: &Work, star: &Star, own: Option<u32>) -> Worth
     }
     if let Some((_, _, ln)) = work::magnitude(scene, &star.cells, |_| 1.0) {
         total += ln;
-        parts[4] = ln;
     }
-    let group = parts[0] + parts[3] + parts[5];
+    let group = apart + shared + hidden;
     Worth {
         lone: total - group,
         group,

@@ -134,16 +134,7 @@ pub fn predict(scene: &Scene, e: usize, star: &Star, press: f64) -> Pred {
         ((x, y), cov) = without((x, y), cov, &star.blends[i].1);
     } else if let Cell::Alone(d) = star.cells[e] {
         let d = d as usize;
-        let own = Obs {
-            t_yr: s.t_yr,
-            x_mas: s.data.x_mas[d],
-            y_mas: s.data.y_mas[d],
-            cov: s
-                .sensor
-                .errors
-                .position(s.data.cov_mas2[d], press, s.sensor.fwhm_mas),
-        };
-        ((x, y), cov) = without((x, y), cov, &own);
+        ((x, y), cov) = without((x, y), cov, &observation(scene, e, d, press));
         if s.mag[d].is_finite() {
             let wm = 1.0 / s.mag_var[d];
             let full = 1.0 / mag_var;
@@ -336,9 +327,7 @@ fn blend_place(
             light += (part[i] * w).powi(2) * 0.85 * dm2 * off2;
         }
     }
-    let main = part[..n].iter().copied().fold(0.0, f64::max);
-    let mixed = (3.0 * (1.0 - main)).min(1.0);
-    let model = mixed * (sn.errors.blend_fwhm * sn.fwhm_mas + sn.spread_error() * spread2.sqrt());
+    let model = sn.blend_error_mas(blend::mixed(&part[..n]), spread2);
     cov += Cov2::round(model * model + light);
     Some(Obs {
         t_yr: s.t_yr,

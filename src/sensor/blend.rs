@@ -71,6 +71,14 @@ pub fn place(
     }
 }
 
+/// How much of a blend it is, 0 to 1, from its stars' parts of the light: a companion with a few
+/// per cent leaves the measurement of the main star as good as it was.
+#[must_use]
+pub fn mixed(parts: &[f64]) -> f64 {
+    let main = parts.iter().copied().fold(0.0, f64::max);
+    (3.0 * (1.0 - main)).min(1.0)
+}
+
 /// Flux relative to magnitude zero.
 #[must_use]
 pub fn flux_of(mag: f64) -> f64 {

@@ -32,13 +32,15 @@ pub struct Sensor {
 }
 
 impl Sensor {
-    /// Error of a blend's predicted place, as a share of the extent of its stars: a profile fit
-    /// depends on the profile, a centroid hardly.
+    /// Error of a blend's predicted place per axis \[mas\], from how much of a blend it is
+    /// ([`blend::mixed`]) and the variance of its stars' places, weighted by light \[mas^2\].
     #[must_use]
-    pub fn spread_error(&self) -> f64 {
-        match self.blend {
+    pub fn blend_error_mas(&self, mixed: f64, spread_mas2: f64) -> f64 {
+        // A profile fit depends on the profile, a centroid hardly.
+        let of_extent = match self.blend {
             BlendLaw::Psf => 0.15,
             BlendLaw::Centroid => 0.03,
-        }
+        };
+        mixed * (self.errors.blend_fwhm * self.fwhm_mas + of_extent * spread_mas2.sqrt())
     }
 }

@@ -157,7 +157,7 @@ fn central(dynamics: &Dynamics, gm: f64, fit: &Fit, t_ref: f64) -> Summary {
     let mut cov = phi * fit.cov * phi.transpose();
     cov = (cov + cov.transpose()) * 0.5;
     let (cx, cy) = dynamics.centre_at(t_ref);
-    let (vx, vy) = centre_speed(dynamics);
+    let (vx, vy) = dynamics.centre_velocity();
     let p = P6::new(
         t.r[0] + cx,
         t.r[1] + cy,
@@ -192,17 +192,6 @@ fn central(dynamics: &Dynamics, gm: f64, fit: &Fit, t_ref: f64) -> Summary {
         chi2: 0.0,
         dof: 0,
         ln_evidence: 0.0,
-    }
-}
-
-fn centre_speed(dynamics: &Dynamics) -> (f64, f64) {
-    match *dynamics {
-        Dynamics::Central {
-            vx_mas_yr,
-            vy_mas_yr,
-            ..
-        } => (vx_mas_yr, vy_mas_yr),
-        Dynamics::Free { .. } => (0.0, 0.0),
     }
 }
 

@@ -44,7 +44,7 @@ fn time(e: usize) -> f64 {
 }
 
 /// Row k of every list, with the identifier k, is star k.
-pub fn write_campaign(folder: &Path) {
+fn write_campaign(folder: &Path) {
     let mut toml = String::from(
         "[field]\nname = \"Lantern core\"\nreference_epoch = 2005.0\n\
          [central_mass]\nmass_msun = 2.6e6\ndistance_pc = 7100.0\nx_mas = 0.0\ny_mas = 0.0\n\
@@ -83,6 +83,14 @@ pub fn program(folder: &Path, args: &[&str]) -> (i32, String) {
     (out.status.code().unwrap_or(-1), said)
 }
 
+/// The campaign written into a folder and linked into `run`.
+pub fn write_and_link(folder: &Path) {
+    write_campaign(folder);
+    let args = ["link", "campaign.toml", "--out", "run", "--quiet"];
+    let (code, said) = program(folder, &args);
+    assert_eq!(code, 0, "{said}");
+}
+
 /// A column of a table by claim.
 fn by_claim(folder: &Path, column: &str) -> BTreeMap<String, String> {
     let bytes = fs::read(folder.join("audit/verdicts.ecsv")).expect("verdicts");
@@ -96,12 +104,7 @@ fn by_claim(folder: &Path, column: &str) -> BTreeMap<String, String> {
 fn claims_are_judged_and_bad_ones_refused() {
     let keep = tempfile::tempdir().expect("a folder");
     let folder = keep.path();
-    write_campaign(folder);
-    let (code, said) = program(
-        folder,
-        &["link", "campaign.toml", "--out", "run", "--quiet"],
-    );
-    assert_eq!(code, 0, "{said}");
+    write_and_link(folder);
 
     let mut claims = String::from("claim,epoch,id,x_mas,y_mas\n");
     for e in 0..EPOCHS {
@@ -157,12 +160,7 @@ fn claims_are_judged_and_bad_ones_refused() {
 fn a_claimed_orbit_and_a_track_are_the_star_they_describe() {
     let keep = tempfile::tempdir().expect("a folder");
     let folder = keep.path();
-    write_campaign(folder);
-    let (code, said) = program(
-        folder,
-        &["link", "campaign.toml", "--out", "run", "--quiet"],
-    );
-    assert_eq!(code, 0, "{said}");
+    write_and_link(folder);
     let s = star(0);
     let mut claims = String::from(
         "claim,track,semi_major_mas,eccentricity,inclination_deg,node_deg,arg_pericentre_deg,\

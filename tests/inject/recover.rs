@@ -4,18 +4,13 @@ use std::fs;
 
 use asterskein::io::ecsv_read;
 
-use crate::audit::{program, write_campaign};
+use crate::audit::{program, write_and_link};
 
 #[test]
 fn made_up_stars_are_counted_and_the_run_repeats() {
     let keep = tempfile::tempdir().expect("a folder");
     let folder = keep.path();
-    write_campaign(folder);
-    let (code, said) = program(
-        folder,
-        &["link", "campaign.toml", "--out", "run", "--quiet"],
-    );
-    assert_eq!(code, 0, "{said}");
+    write_and_link(folder);
     let recover = |out: &str, more: &[&str]| {
         let args = ["recover", "run", "--stars", "10", "--quiet", "--out", out];
         let (code, said) = program(folder, &[&args[..], more].concat());

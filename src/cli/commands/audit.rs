@@ -2,7 +2,6 @@
 
 use std::path::{Path, PathBuf};
 
-use anyhow::Context;
 use asterskein::audit::claims::{self, Case};
 use asterskein::audit::judge::{Judged, judge};
 use asterskein::audit::tables::{self, Names};
@@ -15,10 +14,11 @@ use asterskein::io::read_run::read_run;
 use asterskein::io::run_dir::{Existing, RunDir};
 use serde_json::json;
 
-use super::super::exit::{Exit, UsageError};
+use super::super::exit::Exit;
 use super::super::lines::{Align, Lines};
 use super::super::printer::Printer;
 use super::super::progress::Progress;
+use super::beside;
 
 /// The mark of an earlier result of this command.
 const MARKER: &str = "verdicts.ecsv";
@@ -53,15 +53,8 @@ pub struct Args {
 }
 
 pub fn run(args: &Args, printer: &Printer, threads: usize) -> anyhow::Result<Exit> {
-    let out = match &args.out {
-        Some(dir) => dir.clone(),
-        None => beside(&args.run)?,
-    };
-    let existing = if args.replace {
-        Existing::Replace { marker: MARKER }
-    } else {
-        Existing::Refuse
-    };
+    let out = beside::directory(args.out.as_deref(), &args.run, "-audit")?;
+    let existing = Existing::asked(args.replace, MARKER);
     let dir = RunDir::begin(&out, existing)?;
     let progress = Progress::new(printer);
     progress.stage("reading", None);
@@ -138,20 +131,6 @@ pub fn run(args: &Args, printer: &Printer, threads: usize) -> anyhow::Result<Exi
     } else {
         Exit::Failed
     })
-}
-
-/// `run1` to `run1-audit`.
-fn beside(run: &Path) -> anyhow::Result<PathBuf> {
-    let full =
-        std::fs::canonicalize(run).with_context(|| format!("cannot read {}", run.display()))?;
-    let Some(name) = full.file_name() else {
-        return Err(
-            UsageError("no name beside this directory; give one with --out".to_owned()).into(),
-        );
-    };
-    let mut name = name.to_owned();
-    name.push("-audit");
-    Ok(full.with_file_name(name))
 }
 
 /// The verdicts, for people or as JSON.

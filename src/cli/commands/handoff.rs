@@ -28,13 +28,7 @@ pub struct Args {
 }
 
 pub fn run(args: &Args, printer: &Printer) -> anyhow::Result<Exit> {
-    let existing = if args.replace {
-        Existing::Replace {
-            marker: handoff::MARKER,
-        }
-    } else {
-        Existing::Refuse
-    };
+    let existing = Existing::asked(args.replace, handoff::MARKER);
     // Settled before the result is read: a full directory is found at once.
     let dir = RunDir::begin(&args.out, existing)?;
     let run = read_run::read_run(&args.run)?;

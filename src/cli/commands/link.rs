@@ -86,13 +86,7 @@ impl From<TableFormat> for Format {
 }
 
 pub fn run(args: &Args, printer: &Printer, threads: usize) -> anyhow::Result<Exit> {
-    let existing = if args.replace {
-        Existing::Replace {
-            marker: run_info::FILE,
-        }
-    } else {
-        Existing::Refuse
-    };
+    let existing = Existing::asked(args.replace, run_info::FILE);
     // What can be refused is refused before the long work.
     let dir = RunDir::begin(&args.out, existing)?;
     let old = args

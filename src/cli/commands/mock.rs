@@ -59,13 +59,7 @@ pub enum Field {
 }
 
 pub fn run(args: &Args, printer: &Printer) -> anyhow::Result<Exit> {
-    let existing = if args.replace {
-        Existing::Replace {
-            marker: "campaign.toml",
-        }
-    } else {
-        Existing::Refuse
-    };
+    let existing = Existing::asked(args.replace, "campaign.toml");
     let settings = settings(args)?;
     let campaign = make_campaign(settings, args.seed)?;
     write_campaign(&campaign, &args.out, existing)?;

@@ -1,6 +1,7 @@
 //! One file per command.
 
 pub mod audit;
+pub mod beside;
 pub mod check;
 pub mod explain;
 pub mod handoff;

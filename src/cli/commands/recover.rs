@@ -15,9 +15,10 @@ use asterskein::io::run_dir::{Existing, RunDir};
 use asterskein::io::run_info;
 use serde::{Deserialize, Serialize};
 
-use super::super::exit::{Exit, UsageError};
+use super::super::exit::Exit;
 use super::super::printer::{Printer, Summary};
 use super::super::progress::Progress;
+use super::beside;
 
 /// The mark of an earlier result of this command.
 const MARKER: &str = "completeness.ecsv";
@@ -44,15 +45,8 @@ pub struct Args {
 }
 
 pub fn run(args: &Args, printer: &Printer, threads: usize) -> anyhow::Result<Exit> {
-    let out = match &args.out {
-        Some(dir) => dir.clone(),
-        None => beside(&args.run)?,
-    };
-    let existing = if args.replace {
-        Existing::Replace { marker: MARKER }
-    } else {
-        Existing::Refuse
-    };
+    let out = beside::directory(args.out.as_deref(), &args.run, "-recover")?;
+    let existing = Existing::asked(args.replace, MARKER);
     let dir = RunDir::begin(&out, existing)?;
     let progress = Progress::new(printer);
     progress.stage("reading", None);
@@ -64,7 +58,7 @@ pub fn run(args: &Args, printer: &Printer, threads: usize) -> anyhow::Result<Exi
     };
     let recovery = Recovery::new(linked, args.stars as usize, args.seed);
     let n_batches = recovery.n_batches();
-    let diary_path = sibling(&out, ".recover-progress");
+    let diary_path = beside::sibling(&out, ".recover-progress");
     let mut diary = Diary::open(&diary_path, &Header::of(args, &run)?, args.restart)?;
     if !diary.done.is_empty() {
         printer.talk(&format!(
@@ -98,23 +92,6 @@ pub fn run(args: &Args, printer: &Printer, threads: usize) -> anyhow::Result<Exi
         .with_context(|| format!("cannot remove {}", diary_path.display()))?;
     printer.summary(&summary(&stars, &out));
     Ok(Exit::Done)
-}
-
-/// `run1` to `run1-recover`.
-fn beside(run: &Path) -> anyhow::Result<PathBuf> {
-    let full = fs::canonicalize(run).with_context(|| format!("cannot read {}", run.display()))?;
-    if full.file_name().is_none() {
-        return Err(
-            UsageError("no name beside this directory; give one with --out".to_owned()).into(),
-        );
-    }
-    Ok(sibling(&full, "-recover"))
-}
-
-fn sibling(path: &Path, ending: &str) -> PathBuf {
-    let mut name = path.file_name().unwrap_or_default().to_owned();
-    name.push(ending);
-    path.with_file_name(name)
 }
 
 /// What an attempt depends on; another attempt may only go on from an equal one.
